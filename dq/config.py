@@ -1,0 +1,338 @@
+"""The TOML configuration: every key with unit, bounds, default and its origin.
+
+``load_config`` reads the file into frozen sections. A stage never sees the file: it
+receives its own section. Paths stay relative to the file's folder (``Config.base``).
+"""
+
+from __future__ import annotations
+
+import difflib
+import hashlib
+import json
+import tomllib
+from pathlib import Path
+
+from pydantic import BaseModel, ConfigDict, Field, ValidationError, field_validator
+
+from dq.errors import ConfigError
+
+
+class _Section(BaseModel):
+    model_config = ConfigDict(extra="forbid", frozen=True, allow_inf_nan=False)
+
+
+class Site(_Section):
+    """Who is observed."""
+
+    name: str = Field(min_length=1, description="name of the site, for the page")
+    strain: str = Field(
+        pattern=r"^[A-Za-z0-9][A-Za-z0-9:_.\-]{0,254}$",
+        description="name of the strain channel",
+    )
+
+
+class Layout(_Section):
+    """Where another HDF5 layout keeps a channel and its times."""
+
+    dataset: str = Field(description="path of the dataset inside each file")
+    channel: str | None = Field(
+        default=None,
+        pattern=r"^[A-Za-z0-9][A-Za-z0-9:_.\-]{0,254}$",
+        description="channel name when the file does not carry it",
+    )
+    start_attribute: str = Field(
+        default="gps_start", description="attribute with the first sample's GPS second"
+    )
+    step_attribute: str | None = Field(
+        default=None, description="attribute with the seconds per sample"
+    )
+    rate_attribute: str | None = Field(
+        default=None, description="attribute with the samples per second"
+    )
+
+
+class ReadyMask(_Section):
+    """A 1 Hz bit mask inside the data files that says when data are ready."""
+
+    dataset: str = Field(description="path of the mask dataset inside each file")
+    bits: list[int] = Field(
+        min_length=1, description="bits (0 = lowest) that must all be set"
+    )
+
+    @field_validator("bits")
+    @classmethod
+    def _bits_in_range(cls, bits: list[int]) -> list[int]:
+        if any(b < 0 or b > 62 for b in bits):
+            raise ValueError("bits must lie in 0..62")
+        return bits
+
+
+class Data(_Section):
+    """Which files are read."""
+
+    files: list[str] = Field(min_length=1, description="HDF5 paths or globs")
+    channels: str = Field(description="the channel list, CSV")
+    ready: str | None = Field(
+        default=None, description="ready segments; absent = all recorded time"
+    )
+    injections: str | None = Field(default=None, description="test signals, CSV")
+    layout: Layout | None = None
+    ready_mask: ReadyMask | None = None
+
+
+class Conditioning(_Section):
+    """Spectrum and whitening."""
+
+    spectrum_segment_s: float = Field(
+        default=4.0,
+        ge=1.0,
+        le=32.0,
+        description="s; Hann segment of the spectrum. 4 s resolves lines to 0.5 Hz "
+        "and leaves 32 half-overlapped segments in a frame (own choice)",
+    )
+    spectrum_frame_s: float = Field(
+        default=64.0,
+        ge=8.0,
+        le=512.0,
+        description="s; a spectrum is measured per frame on a fixed GPS grid "
+        "(own choice: shorter than drifts of the level, common practice minutes)",
+    )
+    spectrum_span_s: float = Field(
+        default=128.0,
+        ge=0.0,
+        le=1024.0,
+        description="s; frames up to this far on both sides of a block are combined",
+    )
+    whitening_half_length_s: float = Field(
+        default=2.0,
+        ge=0.25,
+        le=16.0,
+        description="s; half-length of the whitening filter = its settling time",
+    )
+
+
+class Tiles(_Section):
+    """The multi-Q tile plan."""
+
+    block_s: float = Field(
+        default=64.0,
+        ge=8.0,
+        le=512.0,
+        description="s; analysis blocks start at GPS multiples of this",
+    )
+    mismatch: float = Field(
+        default=0.2,
+        gt=0.0,
+        le=0.5,
+        description="worst-case fractional energy loss between tiles "
+        "(Chatterji et al. 2004)",
+    )
+    q_min: float = Field(
+        default=4.0, ge=3.3166248, le=200.0, description="lowest Q; bound is sqrt(11)"
+    )
+    q_max: float = Field(default=64.0, ge=3.3166248, le=500.0, description="highest Q")
+    f_low_hz: float | None = Field(
+        default=None,
+        gt=0.0,
+        le=32768.0,
+        description="Hz; lower edge of the band; default sample_rate / 50 held within "
+        "1..10 Hz, unless channels.csv says otherwise (own choice)",
+    )
+    f_high_hz: float | None = Field(
+        default=None,
+        gt=0.0,
+        le=32768.0,
+        description="Hz; upper edge; default and bound: what the rate carries",
+    )
+
+
+class Transients(_Section):
+    """From tiles to transients."""
+
+    snr_threshold: float = Field(
+        default=5.5,
+        ge=3.5,
+        le=1000.0,
+        description="a tile counts from this SNR on; 5.5 is exp(-16.1) per tile",
+    )
+
+
+class Families(_Section):
+    """The sorter."""
+
+    model: str | None = Field(default=None, description="model file; absent = unsorted")
+
+
+class Witnesses(_Section):
+    """Which auxiliary channels explain the strain's transients."""
+
+    snr_thresholds: list[float] = Field(
+        default=[5.5, 7.0, 10.0, 15.0, 25.0, 50.0, 100.0],
+        min_length=1,
+        max_length=50,
+        description="ladder of thresholds on the auxiliary channel, SNR (own choice: "
+        "steps of about 1.5)",
+    )
+    half_windows_s: list[float] = Field(
+        default=[0.05, 0.1, 0.2, 0.5, 1.0],
+        min_length=1,
+        max_length=50,
+        description="s; ladder of half-widths around an auxiliary transient",
+    )
+    false_alarm_probability: float = Field(
+        default=0.01,
+        gt=0.0,
+        le=0.5,
+        description="chance of any false witness in a night, trials counted",
+    )
+    min_coincidences: int = Field(
+        default=3,
+        ge=1,
+        le=1000,
+        description="fewer coincidences never accept a channel (own choice)",
+    )
+
+
+class Vetoes(_Section):
+    """Which time is left out."""
+
+    max_dead_time: float = Field(
+        default=0.05,
+        ge=0.0,
+        le=1.0,
+        description="fraction of analysed time that all vetoes together may remove",
+    )
+    fault_padding_s: float = Field(
+        default=0.1,
+        ge=0.0,
+        le=10.0,
+        description="s; added on both sides of a data fault",
+    )
+
+
+class Config(_Section):
+    """One configuration file."""
+
+    site: Site
+    data: Data
+    conditioning: Conditioning = Conditioning()
+    tiles: Tiles = Tiles()
+    transients: Transients = Transients()
+    families: Families = Families()
+    witnesses: Witnesses = Witnesses()
+    vetoes: Vetoes = Vetoes()
+    base: Path = Field(default=Path("."), exclude=True)
+
+    def path(self, relative: str) -> Path:
+        """Resolve a path of the file against the file's folder."""
+        return self.base / relative
+
+
+def digest(*sections: BaseModel) -> str:
+    """Give the sha256 of the sections' values as canonical JSON."""
+    values = [s.model_dump(mode="json") for s in sections]
+    text = json.dumps(values, sort_keys=True, separators=(",", ":"))
+    return hashlib.sha256(text.encode()).hexdigest()
+
+
+def load_config(path: str | Path) -> Config:
+    """Read and check a configuration file.
+
+    Parameters
+    ----------
+    path : str or Path
+
+    Returns
+    -------
+    Config
+
+    Raises
+    ------
+    ConfigError
+        The file cannot be read, is no TOML, or a key is unknown, missing or out of
+        its bounds; the message names the key, the value, the bound and the remedy.
+    """
+    path = Path(path)
+    try:
+        raw = tomllib.loads(path.read_text(encoding="utf-8"))
+    except OSError as error:
+        raise ConfigError(
+            f"cannot read config {str(path)!r}: {error.strerror}; check the path"
+        ) from error
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
+        raise ConfigError(f"config {str(path)!r} is not TOML: {error}") from error
+    return parse_config(raw, base=path.parent, where=str(path))
+
+
+def parse_config(raw: dict, *, base: Path = Path("."), where: str = "config") -> Config:
+    """Turn a parsed TOML table into a checked ``Config``; errors as ``load_config``."""
+    if "base" in raw:
+        raise ConfigError(f"{where}: unknown key 'base'; remove it")
+    try:
+        config = Config(**raw, base=base)
+    except ValidationError as error:
+        raise ConfigError(f"{where}: {_one_line(error)}") from error
+    _check_between(config, where)
+    return config
+
+
+def _check_between(config: Config, where: str) -> None:
+    tiles = config.tiles
+    if tiles.q_max <= tiles.q_min:
+        raise ConfigError(
+            f"{where}: tiles.q_max={tiles.q_max} must be above "
+            f"tiles.q_min={tiles.q_min}; raise q_max"
+        )
+    if tiles.f_low_hz and tiles.f_high_hz and tiles.f_high_hz <= tiles.f_low_hz:
+        raise ConfigError(
+            f"{where}: tiles.f_high_hz={tiles.f_high_hz} must be above "
+            f"tiles.f_low_hz={tiles.f_low_hz}"
+        )
+    for name in ("snr_thresholds", "half_windows_s"):
+        values = getattr(config.witnesses, name)
+        if any(v <= 0 for v in values) or sorted(set(values)) != values:
+            raise ConfigError(
+                f"{where}: witnesses.{name}={values} must be positive and rising"
+            )
+    layout = config.data.layout
+    if layout and (layout.step_attribute is None) == (layout.rate_attribute is None):
+        raise ConfigError(
+            f"{where}: data.layout needs exactly one of step_attribute and "
+            "rate_attribute; give the one that the files carry"
+        )
+    if config.data.ready and config.data.ready_mask:
+        raise ConfigError(
+            f"{where}: data.ready and data.ready_mask exclude each other; keep one"
+        )
+
+
+def _known_keys(location: tuple) -> list[str]:
+    model: type[BaseModel] = Config
+    for part in location:
+        field = model.model_fields.get(str(part))
+        if field is None:
+            return []
+        kinds = [field.annotation, *getattr(field.annotation, "__args__", ())]
+        models = [k for k in kinds if isinstance(k, type) and issubclass(k, BaseModel)]
+        if not models:
+            return []
+        model = models[0]
+    return [k for k in model.model_fields if k != "base"]
+
+
+def _one_line(error: ValidationError) -> str:
+    first = error.errors()[0]
+    location = tuple(first["loc"])
+    key = ".".join(str(p) for p in location)
+    if first["type"] == "extra_forbidden":
+        known = _known_keys(location[:-1])
+        near = difflib.get_close_matches(str(location[-1]), known, n=1, cutoff=0.0)
+        hint = f"; nearest known key is {near[0]!r}" if near else ""
+        return f"unknown key {key!r}{hint}"
+    if first["type"] == "missing":
+        return f"key {key!r} is required; add it"
+    message = first["msg"].removeprefix("Value error, ")
+    message = message[0].lower() + message[1:]
+    value = repr(first["input"])
+    value = value if len(value) < 80 else value[:77] + "..."
+    return f"{key} = {value}: {message}"

@@ -1,0 +1,237 @@
+"""Names, types, units and printed digits of every table's columns.
+
+The only place that knows column names. A table is a ``pandas.DataFrame``; times are
+GPS seconds as float64, rounded to the microsecond, except in segment tables (vetoes,
+coverage) where times are exact integer nanoseconds inside and exact decimals in
+files.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+
+from dq.errors import InputError
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column: name, kind, unit and how it is printed.
+
+    ``kind`` is ``float``, ``int``, ``text``, ``flag`` (yes / no) or ``time_ns`` (exact
+    integer nanoseconds in memory, decimal seconds in the file).
+    ``format`` is the printf-style format of a float.
+    """
+
+    name: str
+    kind: str
+    unit: str = ""
+    format: str = "%.6g"
+    meaning: str = ""
+
+
+def _floats(*specs: tuple[str, str, str, str]) -> tuple[Column, ...]:
+    return tuple(Column(n, "float", u, f, m) for n, u, f, m in specs)
+
+
+#: One row per transient of one channel (``transients.h5``, ``dq find``).
+TRANSIENTS: tuple[Column, ...] = (
+    *_floats(
+        ("gps_time", "s", "%.6f", "time of the peak"),
+        ("gps_start", "s", "%.6f", "start of the tiles above threshold"),
+        ("gps_end", "s", "%.6f", "end of the tiles above threshold"),
+        ("frequency_hz", "Hz", "%.4f", "frequency of the peak"),
+        ("f_low_hz", "Hz", "%.4f", "lower edge of the tiles above threshold"),
+        ("f_high_hz", "Hz", "%.4f", "upper edge of the tiles above threshold"),
+        ("q", "1", "%.4f", "tile Q of the loudest tile"),
+        ("snr", "1", "%.4f", "signal-to-noise ratio of the loudest tile"),
+        ("amplitude", "unit s^1/2", "%.6e", "root-sum-square amplitude of the peak"),
+    ),
+    Column("tile_count", "int", "1", "%d", "tiles above threshold"),
+)
+
+#: Columns of ``strain_transients.csv``.
+STRAIN_TRANSIENTS: tuple[Column, ...] = (
+    Column("transient_id", "text", meaning="stable name of the row"),
+    *TRANSIENTS,
+    Column("family", "text", meaning="noise family; unknown = declined"),
+    Column("probability", "float", "1", "%.4f", "calibrated family probability"),
+    Column("family_set", "text", meaning="families the sorter cannot exclude"),
+    Column("novelty", "float", "1", "%.4f", "distance from the training set"),
+    Column("witness", "text", meaning="accepted witnesses active at the time"),
+    Column("veto", "text", meaning="vetoes that cover the time"),
+)
+
+#: Columns of ``witnesses.csv``.
+WITNESSES: tuple[Column, ...] = (
+    Column("order", "int", "1", "%d", "order of selection; empty when not chosen"),
+    Column("channel", "text"),
+    Column("target", "text", meaning="which strain transients were tested"),
+    Column("snr_threshold", "float", "1", "%g", "threshold on the channel"),
+    Column("half_window_s", "float", "s", "%g", "half-width of the window"),
+    Column("coincidences", "int", "1", "%d", "strain transients in the windows"),
+    Column("expected", "float", "1", "%.6g", "coincidences expected by chance"),
+    Column("significance", "float", "1", "%.4f", "-log10 of the chance probability"),
+    Column("p_value", "float", "1", "%.4g", "chance probability, trials counted"),
+    Column("efficiency", "float", "1", "%.6f", "fraction of the target removed"),
+    Column("dead_time_s", "float", "s", "%.6f", "time in the windows"),
+    Column("use_fraction", "float", "1", "%.6f", "windows that hold a transient"),
+    Column("safety", "text", meaning="safe, unsafe, or cannot tell"),
+    Column("accepted", "flag"),
+    Column("reason", "text"),
+)
+
+#: Columns of ``vetoes.csv``.
+VETOES: tuple[Column, ...] = (
+    Column("gps_start", "time_ns", "s"),
+    Column("gps_end", "time_ns", "s"),
+    Column("veto", "text", meaning="name of the veto, also its file's"),
+    Column("category", "int", "1", "%d"),
+    Column("source", "text", meaning="fault, witness or family"),
+    Column("channel", "text"),
+    Column("family", "text"),
+)
+
+#: Columns of ``veto_cost.csv``.
+VETO_COST: tuple[Column, ...] = (
+    Column("veto", "text"),
+    Column("category", "int", "1", "%d"),
+    Column("source", "text"),
+    Column("channel", "text"),
+    Column("family", "text"),
+    Column("segments", "int", "1", "%d"),
+    *_floats(
+        ("dead_time_s", "s", "%.6f", "analysed time removed"),
+        ("dead_time_fraction", "1", "%.8f", "of the analysed time"),
+        ("added_dead_time_s", "s", "%.6f", "beyond the vetoes above it"),
+    ),
+    Column("removed", "int", "1", "%d", "strain transients removed"),
+    *_floats(
+        ("efficiency", "1", "%.6f", "fraction of strain transients removed"),
+        ("efficiency_snr8", "1", "%.6f", "the same for SNR >= 8"),
+        ("efficiency_snr20", "1", "%.6f", "the same for SNR >= 20"),
+    ),
+    Column("added_removed", "int", "1", "%d", "removed beyond the vetoes above it"),
+    *_floats(
+        ("use_fraction", "1", "%.6f", "segments that hold a transient"),
+        ("expected_by_chance", "1", "%.6g", "transients a random veto removes"),
+        ("p_value", "1", "%.4g", "chance probability of this many removed"),
+        ("held_out_efficiency", "1", "%.6f", "efficiency on data not chosen from"),
+        ("held_out_low", "1", "%.6f", "95 % interval, lower"),
+        ("held_out_high", "1", "%.6f", "95 % interval, upper"),
+        ("signal_loss", "1", "%.6f", "planted signals vetoed"),
+    ),
+)
+
+#: Columns of ``channels.csv`` as the user writes it; role and channel are required.
+CHANNEL_LIST: tuple[str, ...] = (
+    "channel",
+    "role",
+    "sample_rate",
+    "safe",
+    "f_low_hz",
+    "f_high_hz",
+    "quantity",
+    "unit",
+    "description",
+)
+
+_DTYPES = {"float": "float64", "int": "Int64", "text": "string", "flag": "boolean"}
+
+
+def empty(columns: tuple[Column, ...]) -> pd.DataFrame:
+    """Give a table with the columns and no rows."""
+    return conform(pd.DataFrame({c.name: [] for c in columns}), columns)
+
+
+def conform(table: pd.DataFrame, columns: tuple[Column, ...]) -> pd.DataFrame:
+    """Give the table the columns' order and types; absent columns become missing.
+
+    Parameters
+    ----------
+    table : pandas.DataFrame
+    columns : tuple of Column
+
+    Returns
+    -------
+    pandas.DataFrame
+        A new table; columns that the specification does not name are an error.
+
+    Raises
+    ------
+    InputError
+        The table holds a column that the specification does not name.
+    """
+    names = [c.name for c in columns]
+    extra = [c for c in table.columns if c not in names]
+    if extra:
+        raise InputError(
+            f"table holds unknown column {extra[0]!r}; known are {', '.join(names)}"
+        )
+    out = {}
+    for c in columns:
+        if c.kind == "time_ns":
+            out[c.name] = pd.array(np.asarray(table[c.name], dtype=np.int64))
+            continue
+        values = table[c.name] if c.name in table else pd.NA
+        dtype = _DTYPES[c.kind]
+        series = pd.Series(values, index=table.index)
+        if dtype == "float64":
+            series = pd.to_numeric(series, errors="coerce")
+        out[c.name] = series.astype(dtype).reset_index(drop=True)
+    return pd.DataFrame(out, columns=names)
+
+
+def seconds_text(time_ns: int) -> str:
+    """Write integer nanoseconds as exact decimal seconds without idle zeros.
+
+    Examples
+    --------
+    >>> seconds_text(1_400_000_000_500_000_000)
+    '1400000000.5'
+    >>> seconds_text(-250_000_000)
+    '-0.25'
+    """
+    sign = "-" if time_ns < 0 else ""
+    whole, rest = divmod(abs(int(time_ns)), 1_000_000_000)
+    if rest == 0:
+        return f"{sign}{whole}"
+    return f"{sign}{whole}." + f"{rest:09d}".rstrip("0")
+
+
+def format_column(values: pd.Series, column: Column) -> list[str]:
+    """Format one column for a CSV file; a missing value is an empty cell."""
+    if column.kind == "time_ns":
+        return [seconds_text(v) for v in values]
+    missing = values.isna().to_numpy()
+    if column.kind == "float":
+        cells = [column.format % v for v in values.fillna(0.0)]
+    elif column.kind == "int":
+        cells = [str(int(v)) for v in values.fillna(0)]
+    elif column.kind == "flag":
+        cells = ["yes" if v else "no" for v in values.fillna(False)]
+    else:
+        cells = [str(v) for v in values.fillna("")]
+    return ["" if m else c for m, c in zip(missing, cells, strict=True)]
+
+
+def csv_text(table: pd.DataFrame, columns: tuple[Column, ...]) -> str:
+    r"""Write a table as CSV text: one header line, fixed digits, ``\n`` line ends.
+
+    Examples
+    --------
+    >>> csv_text(empty(VETOES), VETOES)
+    'gps_start,gps_end,veto,category,source,channel,family\n'
+    """
+    import csv
+    import io
+
+    table = conform(table, columns)
+    cells = [format_column(table[c.name], c) for c in columns]
+    stream = io.StringIO()
+    writer = csv.writer(stream, lineterminator="\n")
+    writer.writerow([c.name for c in columns])
+    writer.writerows(zip(*cells, strict=True))
+    return stream.getvalue()
