@@ -125,6 +125,33 @@ VETO_COST: tuple[Column, ...] = (
     ),
 )
 
+#: Columns of a night's ``channels.csv``: how every channel of the list fared.
+NIGHT_CHANNELS: tuple[Column, ...] = (
+    Column("channel", "text"),
+    Column("role", "text", meaning="strain or auxiliary"),
+    *_floats(
+        ("sample_rate_hz", "Hz", "%.9g", "of the recording"),
+        ("f_low_hz", "Hz", "%.4f", "lower edge of the band searched"),
+        ("f_high_hz", "Hz", "%.4f", "upper edge of the band searched"),
+        ("analysed_s", "s", "%.6f", "time judged"),
+        ("missing_s", "s", "%.6f", "wanted, but not recorded or not finite"),
+        ("unjudged_s", "s", "%.6f", "recorded, but in the settling of an end"),
+        ("fault_s", "s", "%.6f", "saturated, flat, dropped out or not finite"),
+    ),
+    Column("transients", "int", "1", "%d"),
+    Column("safe", "text", meaning="yes, no, or empty: decide from injections"),
+    Column("status", "text", meaning="ok or left_out"),
+    Column("reason", "text", meaning="why it was left out, or a note"),
+)
+
+#: Columns of a night's ``coverage.csv``: where each channel's time went.
+COVERAGE: tuple[Column, ...] = (
+    Column("channel", "text"),
+    Column("kind", "text", meaning="analysed, missing, unjudged, or a fault's kind"),
+    Column("gps_start", "time_ns", "s"),
+    Column("gps_end", "time_ns", "s"),
+)
+
 #: Columns of ``channels.csv`` as the user writes it; role and channel are required.
 CHANNEL_LIST: tuple[str, ...] = (
     "channel",
