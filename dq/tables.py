@@ -202,7 +202,7 @@ def conform(table: pd.DataFrame, columns: tuple[Column, ...]) -> pd.DataFrame:
         if c.kind == "time_ns":
             out[c.name] = pd.array(np.asarray(table[c.name], dtype=np.int64))
             continue
-        values = table[c.name] if c.name in table else pd.NA
+        values = table.get(c.name, pd.NA)
         dtype = _DTYPES[c.kind]
         series = pd.Series(values, index=table.index)
         if dtype == "float64":
@@ -262,3 +262,44 @@ def csv_text(table: pd.DataFrame, columns: tuple[Column, ...]) -> str:
     writer.writerow([c.name for c in columns])
     writer.writerows(zip(*cells, strict=True))
     return stream.getvalue()
+
+
+def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
+    """Read back what :func:`csv_text` wrote; an empty cell is a missing value.
+
+    Raises
+    ------
+    InputError
+        A column is absent or unknown, or a cell does not fit its column.
+
+    Examples
+    --------
+    >>> text = "channel,kind,gps_start,gps_end\\nA,analysed,10.5,11\\n"
+    >>> csv_table(text, COVERAGE).gps_start.tolist()
+    [10500000000]
+    """
+    import io
+
+    try:
+        cells = pd.read_csv(io.StringIO(text), dtype=str, keep_default_na=False)
+        table = {c.name: _parse_column(cells[c.name], c) for c in columns}
+    except (ValueError, KeyError, pd.errors.ParserError) as error:
+        raise InputError(f"table does not read back: {error}") from error
+    return conform(pd.DataFrame(table), columns)
+
+
+def _parse_column(cells: pd.Series, column: Column) -> pd.Series:
+    if column.kind == "time_ns":
+        return cells.map(_time_ns).astype("int64")
+    known = cells.mask(cells == "")
+    if column.kind == "flag":
+        return known.map({"yes": True, "no": False})
+    if column.kind in ("int", "float"):
+        return pd.to_numeric(known)
+    return known
+
+
+def _time_ns(text: str) -> int:
+    from decimal import Decimal
+
+    return int(Decimal(text) * 1_000_000_000)
