@@ -265,7 +265,7 @@ def csv_text(table: pd.DataFrame, columns: tuple[Column, ...]) -> str:
 
 
 def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
-    """Read back what :func:`csv_text` wrote; an empty cell is a missing value.
+    r"""Read back what :func:`csv_text` wrote; an empty cell is a missing value.
 
     Raises
     ------
@@ -274,7 +274,7 @@ def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
 
     Examples
     --------
-    >>> text = "channel,kind,gps_start,gps_end\\nA,analysed,10.5,11\\n"
+    >>> text = "channel,kind,gps_start,gps_end\nA,analysed,10.5,11\n"
     >>> csv_table(text, COVERAGE).gps_start.tolist()
     [10500000000]
     """
