@@ -1,0 +1,441 @@
+"""One channel's night: samples in, transients and accounted time out.
+
+Blocks start at GPS multiples of ``block_s`` and each second belongs to one block. A
+block's transform reaches ``pad`` beyond both its ends: the whitening filter and the
+longest tile settle there. Where the data themselves end, the same time is cut off and
+accounted for as unjudged. Blocks go through the tiling several at a time.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, field
+
+import numpy as np
+import pandas as pd
+
+from dq.conditioning.faults import classify, equal_runs
+from dq.conditioning.whiten import (
+    Whitening,
+    design_whitening,
+    difference_response,
+    whitened_spectrum,
+)
+from dq.config import Config
+from dq.errors import ChannelError, NoDataError
+from dq.night.spectra import FrameSpectra
+from dq.night.stream import Piece, SampleWindow
+from dq.segments import Segments
+from dq.tables import TRANSIENTS, conform
+from dq.tiles import TilePlan, band_weights, plan_tiles, tile_runs
+from dq.transients import Marks, label_marks, place_runs, split_finished, summarise
+
+_NS = 1_000_000_000
+
+#: Blocks that go through the tiling together; the FFT library works on 4 to 8 of them
+#: side by side (measured: four times the speed of one at a time).
+BATCH_BLOCKS = 8
+
+#: Longest settling time of tile and filter at the ends of data, s. Longer tiles are
+#: left out of the plan: they would cost more unjudged time than they find (own choice).
+MAX_SETTLING_S = 8.0
+
+#: Runs carried over from batch to batch before clusters are cut at the batch's end, so
+#: that a channel which never falls below threshold cannot fill the memory.
+MAX_PENDING = 300_000
+
+
+@dataclass(frozen=True)
+class ChannelResult:
+    """What a channel's analysis found; all segments lie in the requested range.
+
+    Attributes
+    ----------
+    channel : str
+    sample_rate : float
+        Hz.
+    f_low_hz, f_high_hz : float
+        Lowest and highest tile frequency that was searched.
+    transients : pandas.DataFrame
+        Columns of ``dq.tables.TRANSIENTS``, sorted by time.
+    analysed, missing, unjudged : Segments
+        Judged time; wanted but not recorded or not finite; recorded and wanted, but
+        within the settling time of an end or without enough data for a spectrum.
+    faults : dict of str to Segments
+        ``saturation``, ``flat_line``, ``dropout``, ``not_finite``.
+    notes : list of str
+        What a reader should know, one line each.
+    """
+
+    channel: str
+    sample_rate: float
+    f_low_hz: float
+    f_high_hz: float
+    transients: pd.DataFrame
+    analysed: Segments
+    missing: Segments
+    unjudged: Segments
+    faults: dict[str, Segments]
+    notes: list[str] = field(default_factory=list)
+
+
+def default_low_edge(sample_rate: float) -> float:
+    """Give the lower edge of the band where nobody chose one, Hz."""
+    return min(max(sample_rate / 50.0, 1.0), 10.0)
+
+
+@dataclass(frozen=True)
+class BlockPlan:
+    """Everything about the blocks of one channel that does not depend on its data."""
+
+    rate: float
+    block_ns: int
+    pad_ns: int
+    segment: int
+    half_length: int
+    tiles: TilePlan
+    weights: object
+    difference: np.ndarray
+
+    @property
+    def batch_ns(self) -> int:
+        """Length of a batch of blocks."""
+        return BATCH_BLOCKS * self.block_ns
+
+
+def plan_blocks(rate, config: Config, f_low: float, f_high: float | None) -> BlockPlan:
+    """Plan block, padding and tiles for a sample rate.
+
+    Raises
+    ------
+    PlanError
+        The band does not fit the rate.
+    """
+    from scipy.fft import next_fast_len
+
+    settings, tiles = config.conditioning, config.tiles
+    fs = float(rate)
+    segment = 2 * max(round(settings.spectrum_segment_s * fs / 2), 8)
+    half = round(settings.whitening_half_length_s * fs)
+    half = min(max(half, 4), segment // 2)
+    limit = MAX_SETTLING_S - half / fs
+    options = {
+        "f_low": f_low,
+        "f_high": f_high,
+        "q_min": tiles.q_min,
+        "q_max": tiles.q_max,
+        "mismatch": tiles.mismatch,
+        "max_settling_s": limit,
+    }
+    probe = plan_tiles(fs, round(tiles.block_s * fs), **options)
+    pad = math.ceil(4 * (half / fs + probe.settling_s + 2 / fs)) / 4
+    for step in range(17):
+        samples = round((tiles.block_s + 2 * (pad + step / 4)) * fs)
+        if next_fast_len(samples, real=True) == samples:
+            pad += step / 4
+            break
+    samples = round((tiles.block_s + 2 * pad) * fs)
+    plan = plan_tiles(fs, samples, **options)
+    frequency = np.arange(segment // 2 + 1) * (fs / segment)
+    return BlockPlan(
+        rate=fs,
+        block_ns=round(tiles.block_s * _NS),
+        pad_ns=round(pad * _NS),
+        segment=segment,
+        half_length=half,
+        tiles=plan,
+        weights=band_weights(plan, frequency),
+        difference=difference_response(frequency, fs),
+    )
+
+
+@dataclass
+class _Item:
+    """One transform: a piece's samples around one block, and the time it judges."""
+
+    piece: Piece
+    low_ns: int
+    high_ns: int
+    origin_ns: int
+    spectrum: np.ndarray
+    level: np.ndarray
+    noise: np.ndarray
+
+
+class _FaultLog:
+    """Collects the suspicious runs of the night until the extremes are known."""
+
+    def __init__(self) -> None:
+        self.lowest, self.highest = math.inf, -math.inf
+        self._rows: list[tuple] = []
+
+    def examine(self, pieces: list[Piece]) -> Segments:
+        """Record the runs of the window; give the time of all of them."""
+        starts, ends = [], []
+        for piece in pieces:
+            self.lowest = min(self.lowest, float(piece.values.min()))
+            self.highest = max(self.highest, float(piece.values.max()))
+            runs = equal_runs(piece.values)
+            for i in range(len(runs.first)):
+                low = piece.time_ns(int(runs.first[i]))
+                high = piece.time_ns(int(runs.first[i] + runs.length[i]))
+                value, flat = float(runs.value[i]), bool(runs.flat[i])
+                self._rows.append((low, high, value, flat, bool(runs.plateau[i])))
+                starts.append(low)
+                ends.append(high)
+        return Segments.from_arrays(starts, ends)
+
+    def segments(self, wanted: Segments) -> dict[str, Segments]:
+        """Give the faults by kind, within the wanted time."""
+        low, high, value, flat, plateau = (
+            map(np.array, zip(*self._rows, strict=True))
+            if self._rows
+            else (np.zeros(0, dtype=t) for t in (int, int, float, bool, bool))
+        )
+        kinds = classify(
+            value, flat, plateau, lowest=self.lowest, highest=self.highest
+        )
+        out = {}
+        for kind in ("saturation", "flat_line", "dropout"):
+            chosen = kinds == kind
+            out[kind] = Segments.from_arrays(low[chosen], high[chosen]) & wanted
+        return out
+
+
+class _ChannelRun:
+    """The batch loop over one channel; see :func:`analyse_channel`."""
+
+    def __init__(self, data, plan: BlockPlan, config: Config, ready, wanted):
+        settings = config.conditioning
+        self.plan = plan
+        self.wanted = wanted
+        self.threshold = 1.0 + 0.5 * config.transients.snr_threshold**2
+        self.window = SampleWindow(data, ready)
+        self.frames = FrameSpectra(
+            rate=data.rate,
+            segment=plan.segment,
+            hop=plan.segment // 2,
+            frame_ns=round(settings.spectrum_frame_s * _NS),
+            span_ns=round(settings.spectrum_span_s * _NS),
+        )
+        self.faults = _FaultLog()
+        self.finite: list[tuple[int, int]] = []
+        self.analysed: list[tuple[int, int]] = []
+        self.tables: list[dict] = []
+        self.pending = Marks.none()
+        self.cut = False
+        segment_ns = round(plan.segment / plan.rate * _NS)
+        reach = self.frames.span_ns + self.frames.frame_ns + segment_ns
+        self.context_ns = max(reach, plan.pad_ns + segment_ns)
+
+    def batch(self, start_ns: int, *, last: bool) -> None:
+        """Analyse the blocks of the batch that starts at ``start_ns``."""
+        plan = self.plan
+        end_ns = start_ns + plan.batch_ns
+        self.window.move(start_ns - self.context_ns, end_ns + self.context_ns)
+        pieces = self.window.pieces
+        bad = self.faults.examine(pieces)
+        self.finite += [(p.start_ns, p.end_ns) for p in pieces]
+        self.frames.update(pieces, start_ns, end_ns, bad)
+        items = []
+        for block in range(BATCH_BLOCKS):
+            items += self._items(start_ns + block * plan.block_ns)
+        parts = [self.pending]
+        for first in range(0, len(items), BATCH_BLOCKS):
+            parts.append(self._marks(items[first : first + BATCH_BLOCKS], start_ns))
+        self._collect(Marks.join(parts), start_ns, last=last)
+
+    def _items(self, block_ns: int) -> list[_Item]:
+        plan, items = self.plan, []
+        whitening = None
+        for piece in self.window.pieces:
+            low = max(block_ns, piece.start_ns + plan.pad_ns)
+            high = min(block_ns + plan.block_ns, piece.end_ns - plan.pad_ns)
+            for begin, end in self.wanted.clip(low, max(high, low)):
+                if whitening is None:
+                    whitening = self._whitening(block_ns)
+                if whitening is None:
+                    return []
+                items.append(self._item(piece, block_ns, begin, end, whitening))
+        return items
+
+    def _whitening(self, block_ns: int) -> Whitening | None:
+        plan = self.plan
+        found = self.frames.around(block_ns, block_ns + plan.block_ns)
+        if found is None:
+            return None
+        return design_whitening(
+            found,
+            sample_rate=plan.rate,
+            segment=plan.segment,
+            half_length=plan.half_length,
+            edge_hz=plan.tiles.f_low,
+        )
+
+    def _item(self, piece, block_ns, begin, end, whitening: Whitening) -> _Item:
+        plan, samples = self.plan, self.plan.tiles.samples
+        index = piece.index_from(block_ns - plan.pad_ns)
+        first = max(index, 0)
+        spectrum = whitened_spectrum(
+            piece.values[first : index + samples],
+            first - index,
+            samples,
+            whitening,
+            sample_rate=plan.rate,
+        )
+        level = plan.weights @ whitening.density
+        noise = 1.0 / (plan.weights @ whitening.gain)
+        # pieces know their start to the nanosecond; samples usually lie on rounder
+        # times, and the origin must not depend on where reading began
+        origin = 10 * round(piece.time_ns(index) / 10)
+        self.analysed.append((begin, end))
+        return _Item(piece, begin, end, origin, spectrum, level, noise)
+
+    def _marks(self, items: list[_Item], reference_ns: int) -> Marks:
+        runs = tile_runs(
+            np.stack([i.spectrum for i in items]),
+            self.plan.tiles,
+            level=np.stack([i.level for i in items]),
+            start_s=np.array([(i.low_ns - i.origin_ns) / _NS for i in items]),
+            end_s=np.array([(i.high_ns - i.origin_ns) / _NS for i in items]),
+            threshold=self.threshold,
+        )
+        return place_runs(
+            runs,
+            self.plan.tiles,
+            origin_s=np.array([(i.origin_ns - reference_ns) / _NS for i in items]),
+            noise=np.stack([i.noise for i in items]),
+        )
+
+    def _collect(self, marks: Marks, start_ns: int, *, last: bool) -> None:
+        labels = label_marks(marks)
+        batch_s = self.plan.batch_ns / _NS
+        reach = self.plan.tiles.longest_half_extent_s
+        finished, pending = split_finished(marks, labels, batch_s - reach)
+        if last or np.count_nonzero(pending) > MAX_PENDING:
+            self.cut |= not last
+            finished, pending = finished | pending, pending & False
+        table = summarise(marks.take(finished), labels[finished])
+        for name in ("time", "start", "end"):
+            table[name] = np.round(table[name], 6) + start_ns / _NS
+        self.tables.append(table)
+        self.pending = marks.take(pending).shift(-batch_s)
+
+    def table(self) -> pd.DataFrame:
+        """Give all transients so far as one table."""
+        names = ("time", "start", "end", "frequency", "low", "high", "q", "snr")
+        names = (*names, "amplitude", "count")
+        columns = [c.name for c in TRANSIENTS]
+        data = {
+            column: np.concatenate([t[name] for t in self.tables])
+            if self.tables
+            else np.zeros(0)
+            for column, name in zip(columns, names, strict=True)
+        }
+        frame = conform(pd.DataFrame(data), TRANSIENTS)
+        frame = frame.sort_values(["gps_time", "frequency_hz"], kind="stable")
+        return frame.reset_index(drop=True)
+
+
+def analyse_channel(
+    data,
+    *,
+    ready: Segments | None,
+    start_ns: int,
+    end_ns: int,
+    config: Config,
+    f_low_hz: float | None = None,
+    f_high_hz: float | None = None,
+    progress=None,
+) -> ChannelResult:
+    """Find the transients of one channel in ``[start_ns, end_ns)``.
+
+    Parameters
+    ----------
+    data : dq.store.ChannelData
+    ready : Segments or None
+        Ready time; None means all recorded time. Data outside are not read, data
+        beyond the requested range are, where they exist, so that the result of a
+        second does not depend on the range that was asked for.
+    start_ns, end_ns : int
+        GPS nanoseconds.
+    config : Config
+    f_low_hz, f_high_hz : float, optional
+        The channel's own band; the configuration's otherwise.
+    progress : callable, optional
+        Called with the fraction done, after each batch.
+
+    Returns
+    -------
+    ChannelResult
+
+    Raises
+    ------
+    ChannelError
+        The samples cannot be used (constant, or the reader refused them).
+    PlanError
+        The band does not fit the channel's rate.
+    NoDataError
+        Nothing is recorded in the wanted time.
+    """
+    span = Segments.of([(start_ns, end_ns)])
+    recorded = data.recorded
+    ready = recorded if ready is None else ready
+    wanted = ready & span
+    if not wanted & recorded:
+        raise NoDataError(
+            f"channel {data.name!r} has no recorded data in the wanted "
+            f"{wanted.total_s:g} s; check the files and the ready segments"
+        )
+    tiles = config.tiles
+    f_low = f_low_hz or tiles.f_low_hz or default_low_edge(float(data.rate))
+    plan = plan_blocks(data.rate, config, f_low, f_high_hz or tiles.f_high_hz)
+    run = _ChannelRun(data, plan, config, ready & recorded, wanted)
+    batches = _batches(wanted & recorded, plan.batch_ns)
+    for number, index in enumerate(batches):
+        follows = number + 1 < len(batches) and batches[number + 1] == index + 1
+        run.batch(index * plan.batch_ns, last=not follows)
+        if progress:
+            progress((number + 1) / len(batches))
+    if run.faults.lowest == run.faults.highest:
+        raise ChannelError(
+            f"channel {data.name!r} is constant at {run.faults.lowest:g} "
+            "throughout; it is dead or not connected"
+        )
+    return _result(data, run, plan, wanted, recorded, f_low)
+
+
+def _batches(time: Segments, batch_ns: int) -> list[int]:
+    numbers: set[int] = set()
+    for start, end in time:
+        numbers.update(range(start // batch_ns, -(-end // batch_ns)))
+    return sorted(numbers)
+
+
+def _result(data, run: _ChannelRun, plan, wanted, recorded, f_low) -> ChannelResult:
+    finite = Segments.of(run.finite) & wanted
+    analysed = Segments.of(run.analysed)
+    faults = run.faults.segments(wanted)
+    faults["not_finite"] = (recorded & wanted) - finite
+    frequency = plan.tiles.frequency
+    notes = []
+    lowest = float(frequency.min())
+    if lowest > 1.5 * f_low:
+        notes.append(
+            f"searched from {lowest:.3g} Hz, not {f_low:g} Hz: lower tiles would need "
+            f"more than {MAX_SETTLING_S:g} s to settle"
+        )
+    if run.cut:
+        notes.append("transients longer than a batch of blocks were cut at its end")
+    return ChannelResult(
+        channel=data.name,
+        sample_rate=float(data.rate),
+        f_low_hz=lowest,
+        f_high_hz=float(frequency.max()),
+        transients=run.table(),
+        analysed=analysed,
+        missing=wanted - finite,
+        unjudged=finite - analysed,
+        faults=faults,
+        notes=notes,
+    )

@@ -1,0 +1,143 @@
+"""Tile energies from whitened spectra: one inverse FFT per row.
+
+A tile's coefficient is the inverse transform of the whitened spectrum under the row's
+window (Chatterji et al. 2004). With a window whose squares add up to 1 and a spectrum
+whose bins have mean square 1, the energy Z = \\|X\\|^2 has mean 1 in Gaussian noise and
+P(Z > z) = exp(-z); a matched signal of optimal SNR rho adds rho^2 / 2 to the mean.
+
+Several transforms ("items") go through each row together, since the FFT library works
+on them side by side.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import scipy.fft
+
+from dq.tiles.kernels import find_runs
+from dq.tiles.plan import TilePlan
+
+#: Complex64 coefficients that one row may hold at a time (32 MiB): longer batches of
+#: long rows are cut, so that memory follows the block and not the batch.
+_ROW_LIMIT = 4 * 2**20
+
+
+@dataclass(frozen=True)
+class TileRuns:
+    """Runs of consecutive tiles above threshold, one array element each.
+
+    Attributes
+    ----------
+    item, row : ndarray of int
+        Which transform and which row of the plan.
+    first, last, peak : ndarray of int
+        First, last and loudest tile of the run.
+    energy, before, after : ndarray of float
+        Normalised energy (mean 1 in noise) of the loudest tile and of the tiles before
+        and after it.
+    total : ndarray of float
+        Normalised energy summed over the run.
+    """
+
+    item: np.ndarray
+    row: np.ndarray
+    first: np.ndarray
+    last: np.ndarray
+    peak: np.ndarray
+    energy: np.ndarray
+    before: np.ndarray
+    after: np.ndarray
+    total: np.ndarray
+
+    def __len__(self) -> int:
+        return len(self.item)
+
+
+def row_coefficients(spectra: np.ndarray, plan: TilePlan, row: int) -> np.ndarray:
+    """Compute all tiles of one row.
+
+    Parameters
+    ----------
+    spectra : ndarray of complex64, shape (n_items, n_bins)
+        Whitened spectra; bins have mean square 1 in noise.
+    plan : TilePlan
+    row : int
+
+    Returns
+    -------
+    ndarray of complex64, shape (n_items, n_tiles)
+        Coefficients at times ``k * length_s / n_tiles`` after the first sample; their
+        phases turn with the tile (only moduli are meant to be used).
+    """
+    window, first = plan.windows[row], plan.first_bin[row]
+    width, n_tiles = len(window), plan.tiles[row]
+    buffer = np.empty((len(spectra), n_tiles), dtype=np.complex64)
+    np.multiply(spectra[:, first : first + width], window, out=buffer[:, :width])
+    buffer[:, width:] = 0
+    return scipy.fft.ifft(buffer, axis=1, norm="forward", overwrite_x=True, workers=1)
+
+
+def tile_runs(
+    spectra: np.ndarray,
+    plan: TilePlan,
+    *,
+    level: np.ndarray,
+    start_s: np.ndarray,
+    end_s: np.ndarray,
+    threshold: float,
+) -> TileRuns:
+    """Find the tiles at or above an energy threshold, as runs in time.
+
+    Parameters
+    ----------
+    spectra : ndarray of complex64, shape (n_items, n_bins)
+    plan : TilePlan
+    level : ndarray, shape (n_items, n_rows)
+        Mean energy that noise has in each row (near 1); energies are divided by it.
+    start_s, end_s : ndarray, shape (n_items,)
+        Tiles centred in ``[start_s, end_s)`` after the first sample are looked at.
+    threshold : float
+        Normalised energy.
+
+    Returns
+    -------
+    TileRuns
+    """
+    places, energies, rows = [], [], []
+    for row in range(len(plan.q)):
+        n_tiles = int(plan.tiles[row])
+        spacing = plan.length_s / n_tiles
+        low = np.ceil(np.asarray(start_s) / spacing - 1e-9).astype(np.int64)
+        high = np.ceil(np.asarray(end_s) / spacing - 1e-9).astype(np.int64)
+        low, high = np.clip(low, 0, n_tiles), np.clip(high, 0, n_tiles)
+        bound = (threshold * level[:, row]).astype(np.float32)
+        chunk = max(_ROW_LIMIT // n_tiles, 1)
+        for item in range(0, len(spectra), chunk):
+            part = slice(item, item + chunk)
+            x = row_coefficients(spectra[part], plan, row).view(np.float32)
+            place, energy = _runs_of(x, low[part], high[part], bound[part])
+            if len(place):
+                place[:, 0] += item
+                places.append(place)
+                energies.append(energy / level[place[:, 0], row][:, None])
+                rows.append(np.full(len(place), row))
+    if not places:
+        none = np.zeros(0, dtype=np.int64)
+        return TileRuns(none, none, none, none, none, *(np.zeros(0),) * 4)
+    place, energy = np.concatenate(places), np.concatenate(energies)
+    return TileRuns(
+        place[:, 0], np.concatenate(rows), *place[:, 1:].T, *energy.T.astype(float)
+    )
+
+
+def _runs_of(x, low, high, bound) -> tuple[np.ndarray, np.ndarray]:
+    capacity = 1024
+    while True:
+        places = np.empty((capacity, 4), dtype=np.int64)
+        energies = np.empty((capacity, 4), dtype=np.float32)
+        found = find_runs(x, low, high, bound, places, energies)
+        if found <= capacity:
+            return places[:found], energies[:found]
+        capacity = found
