@@ -2,40 +2,51 @@
 
 from __future__ import annotations
 
+import math
+from decimal import Decimal, InvalidOperation
+
 import click
 
 
 class GpsTime(click.ParamType):
-    """A GPS time in decimal seconds, read exactly into integer nanoseconds."""
+    """A GPS time in decimal seconds, kept exact as a ``decimal.Decimal``."""
 
     name = "gps"
 
     def convert(
         self, value: object, param: click.Parameter | None, ctx: click.Context | None
-    ) -> int:
-        """Turn the text into nanoseconds; more than nine decimals are refused."""
-        if isinstance(value, int):
-            return value
-        from decimal import Decimal, InvalidOperation
-
+    ) -> Decimal:
+        """Read the text; more than nine decimals are refused, not rounded."""
         try:
             seconds = Decimal(str(value))
         except InvalidOperation:
             self.fail(f"{value!r} is no GPS time in seconds such as 1400000000.5")
         # 2**63 ns is GPS 9223372036.85; times before GPS 0 exist in no recording.
-        if not seconds.is_finite() or not 0 <= seconds < 9_223_372_036:
-            self.fail(f"{value!r} must lie in 0..9223372036 GPS seconds")
-        nanoseconds = seconds * 1_000_000_000
-        if nanoseconds != int(nanoseconds):
+        if not seconds.is_finite() or not 0 <= seconds <= 9_223_372_036:
+            self.fail(f"{value!r} must lie within 0..9223372036 GPS seconds")
+        if seconds != round(seconds, 9):
             self.fail(f"{value!r} is finer than a nanosecond; give nine decimals")
-        return int(nanoseconds)
+        return seconds
+
+
+class Bounded(click.FloatRange):
+    """A number within closed bounds; unlike click's own, it refuses NaN."""
+
+    def convert(
+        self, value: object, param: click.Parameter | None, ctx: click.Context | None
+    ) -> float:
+        """Read the number."""
+        number = float(super().convert(value, param, ctx))
+        if math.isnan(number):
+            self.fail(f"{value!r} is no number")
+        return number
 
 
 GPS = GpsTime()
 
 start_option = click.option(
     "--start",
-    "start_ns",
+    "start",
     type=GPS,
     required=True,
     metavar="GPS",
@@ -43,7 +54,7 @@ start_option = click.option(
 )
 end_option = click.option(
     "--end",
-    "end_ns",
+    "end",
     type=GPS,
     required=True,
     metavar="GPS",
@@ -58,14 +69,14 @@ jobs_option = click.option(
 )
 snr_option = click.option(
     "--snr",
-    type=click.FloatRange(3.5, 1000.0),
+    type=Bounded(3.5, 1000.0),
     default=None,
     metavar="F",
     help="Threshold on the signal-to-noise ratio.  [default: the config's]",
 )
 dead_time_option = click.option(
     "--max-dead-time",
-    type=click.FloatRange(0.0, 1.0),
+    type=Bounded(0.0, 1.0),
     default=None,
     metavar="F",
     help="Fraction of the analysed time that vetoes may take.  [default: the night's]",

@@ -13,6 +13,7 @@ from importlib import import_module
 
 import click
 
+from dq.cli.verb import debug_option
 from dq.errors import DqError
 
 #: The verbs in the order in which a night flows.
@@ -33,26 +34,7 @@ class Verbs(click.Group):
         """Import the verb's file and take its command."""
         if name not in VERBS:
             return None
-        command = import_module(f"dq.cli.{name}").command
-        if not any(p.name == "debug" for p in command.params):
-            command.params.append(_debug_option())
-        return command
-
-
-def _set_debug(ctx: click.Context, _: click.Parameter, value: bool) -> None:
-    if value:
-        ctx.find_root().obj["debug"] = True
-
-
-def _debug_option() -> click.Option:
-    return click.Option(
-        ["--debug"],
-        is_flag=True,
-        is_eager=True,
-        expose_value=False,
-        callback=_set_debug,
-        help="Show the traceback of an error.",
-    )
+        return import_module(f"dq.cli.{name}").command
 
 
 def _show_version(ctx: click.Context, _: click.Parameter, value: bool) -> None:
@@ -66,7 +48,7 @@ def _show_version(ctx: click.Context, _: click.Parameter, value: bool) -> None:
 @click.group(
     cls=Verbs,
     params=[
-        _debug_option(),
+        debug_option(),
         click.Option(
             ["--version"],
             is_flag=True,
@@ -79,19 +61,16 @@ def _show_version(ctx: click.Context, _: click.Parameter, value: bool) -> None:
     invoke_without_command=True,
     context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 88},
     epilog="Exit codes: 0 done; 1 failed; 2 bad input or usage, nothing written; "
-    "3 done, but channels or time were left out (listed).",
+    "3 done, but channels or time were left out (listed). "
+    "Try: dq demo night-demo",
 )
 @click.pass_context
 def root(ctx: click.Context) -> None:
-    """Data quality of an interferometer's night.
+    """Judge the data quality of an interferometer's night.
 
     Finds the transients of the strain and of every auxiliary channel, names the
     channels that witnessed the strain's transients, and writes the veto segments with
     their cost in dead time.
-
-    \b
-    Example:
-      dq demo night-demo
     """
     if ctx.invoked_subcommand is None:
         click.echo(ctx.get_help())

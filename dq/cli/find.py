@@ -1,0 +1,62 @@
+"""``dq find``: the transients of one channel."""
+
+from __future__ import annotations
+
+from decimal import Decimal
+
+import click
+
+from dq.cli.arguments import end_option, snr_option, start_option
+from dq.cli.verb import Verb
+
+
+@click.command(
+    "find",
+    cls=Verb,
+    example="dq find night-demo/site/dq.toml OV-STRAIN --start 1420000000 --end 1420000600",
+    short_help="Transients of one channel, as CSV on stdout.",
+)
+@click.argument("config")
+@click.argument("channel")
+@start_option
+@end_option
+@click.option(
+    "--out",
+    default=None,
+    metavar="FILE",
+    help="Write to FILE, .csv or .h5, instead of stdout.",
+)
+@snr_option
+def command(
+    config: str,
+    channel: str,
+    start: Decimal,
+    end: Decimal,
+    out: str | None,
+    snr: float | None,
+) -> int:
+    """Find the transients of CHANNEL in [start, end).
+
+    Exit code 3: a part of the ready time held faults or missing samples; the log lines
+    on stderr name it.
+    """
+    from pathlib import Path
+
+    from dq.cli.progress import log_to_stderr
+    from dq.config import load_config
+    from dq.night.find import find_in_channel, write_found
+
+    target = None if out is None else Path(out)
+    if target is not None and target.suffix not in (".csv", ".h5"):
+        raise click.UsageError(f"--out {out!r} must end in .csv or .h5")
+    with log_to_stderr():
+        result = find_in_channel(
+            load_config(config), channel, start=start, end=end, snr_threshold=snr
+        )
+    if target is not None:
+        write_found(target, result)
+    else:
+        from dq.tables import TRANSIENTS, csv_text
+
+        click.echo(csv_text(result.transients, TRANSIENTS), nl=False)
+    return 3 if any(result.faults.values()) else 0

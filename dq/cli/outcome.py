@@ -1,0 +1,85 @@
+"""What a person reads on the terminal when a verb is done."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import click
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+    from dq.night import NightOutcome
+
+#: Lines that the list of what was left out may take; the files hold the rest.
+_LISTED = 20
+
+
+def print_night(outcome: NightOutcome) -> None:
+    """Print how a night went, what was left out, and where the page is."""
+    if outcome.nothing_to_do:
+        click.echo(f"nothing to do: {outcome.directory} holds this very night")
+    else:
+        import json
+
+        text = (outcome.directory / "summary.json").read_text(encoding="utf-8")
+        click.echo("\n".join(_night_lines(json.loads(text))))
+    _print_left_out(outcome)
+    click.echo(f"page: {outcome.directory / 'index.html'}")
+
+
+def _night_lines(summary: dict) -> list[str]:
+    dead = summary["dead_time_fraction"] or 0.0
+    efficiency = summary["efficiency"]["all"]
+    removed = "" if efficiency is None else f", remove {100 * efficiency:.1f} %"
+    return [
+        f"analysed {summary['analysed_s']:.1f} s of {summary['requested_s']:.1f} s "
+        f"asked for; {summary['strain_transients']} strain transients",
+        f"vetoes {len(summary['vetoes'])}: take {100 * dead:.2f} % of the analysed "
+        f"time{removed} of the transients",
+    ]
+
+
+def _print_left_out(outcome: NightOutcome) -> None:
+    lines = [f"left out: {name}: {text}" for name, text in outcome.left_out.items()]
+    lines += [
+        f"faults: {name}: {seconds:.3f} s of ready time cannot be used"
+        for name, seconds in outcome.faulty.items()
+    ]
+    for line in lines[:_LISTED]:
+        click.echo(line)
+    if len(lines) > _LISTED:
+        click.echo(f"and {len(lines) - _LISTED} more, see channels.csv")
+
+
+def print_vetoes(cost: pd.DataFrame) -> None:
+    """Print what each veto costs and removes."""
+    rows = [("veto", "category", "dead time", "removes", "use fraction")]
+    for row in cost.itertuples():
+        rows.append(
+            (
+                str(row.veto),
+                _cell(row.category, "{:d}"),
+                _cell(row.dead_time_s, "{:.3f} s"),
+                _cell(row.efficiency, "{:.2%}"),
+                _cell(row.use_fraction, "{:.2%}"),
+            )
+        )
+    click.echo(align(rows))
+
+
+def _cell(value, text: str) -> str:
+    import pandas as pd
+
+    return "-" if pd.isna(value) else text.format(value)
+
+
+def align(rows: list[tuple[str, ...]]) -> str:
+    """Set rows of cells in columns, the first left-aligned, the others right."""
+    widths = [max(len(row[i]) for row in rows) for i in range(len(rows[0]))]
+    lines = []
+    for row in rows:
+        cells = [row[0].ljust(widths[0])]
+        cells += [c.rjust(w) for c, w in zip(row[1:], widths[1:], strict=True)]
+        lines.append("  ".join(cells).rstrip())
+    return "\n".join(lines)

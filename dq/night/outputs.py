@@ -1,0 +1,212 @@
+"""The files of a night's folder, and the manifest that tells what they rest on."""
+
+from __future__ import annotations
+
+import logging
+from collections.abc import Callable
+from pathlib import Path
+
+from dq.config import Config, digest, parse_config
+from dq.errors import InputError
+from dq.night.folder import (
+    LOG,
+    MANIFEST,
+    NightFolder,
+    read_manifest,
+    write_manifest,
+)
+from dq.night.judge import Verdict, judge
+from dq.night.ledger import (
+    CHANNELS_FILE,
+    COVERAGE_FILE,
+    TRANSIENTS_FILE,
+    Ledger,
+    read_ledger,
+)
+from dq.night.plan import NightPlan
+from dq.tables import (
+    COVERAGE,
+    NIGHT_CHANNELS,
+    STRAIN_TRANSIENTS,
+    VETO_COST,
+    VETOES,
+    WITNESSES,
+    seconds_text,
+)
+
+log = logging.getLogger(__name__)
+
+SCHEMA = 1
+
+_DONE, _LEFT_OUT = 0, 3
+
+
+def new_manifest(plan: NightPlan, ledger: Ledger, left_out: dict[str, str]) -> dict:
+    """Describe a night that is about to be written."""
+    from dq import __version__
+
+    config = plan.inputs.config
+    recorded = plan.inputs.store.channel(ledger.strain).recorded & plan.span
+    return {
+        "tool": "dq",
+        "schema": SCHEMA,
+        "dq_version": __version__,
+        "state": "running",
+        "exit_code": _LEFT_OUT if left_out or ledger.faulty else _DONE,
+        "gps_start": seconds_text(plan.start_ns),
+        "gps_end": seconds_text(plan.end_ns),
+        "recorded_s": recorded.total_s,
+        "config": config.model_dump(mode="json"),
+        "settings_sha256": digest(config),
+        "inputs_sha256": plan.inputs_sha256,
+        "request_sha256": plan.request,
+        "left_out": dict(sorted(left_out.items())),
+        "faulty": ledger.faulty,
+        "files": {},
+    }
+
+
+def finished_as(directory: Path, plan: NightPlan) -> dict | None:
+    """Give the manifest if the folder holds this very night, whole; else None."""
+    if not (directory / MANIFEST).exists():
+        return None
+    manifest = read_manifest(directory)
+    same = (
+        manifest.get("state") == "finished"
+        and manifest.get("request_sha256") == plan.request
+        and manifest.get("files") == _sizes(directory)
+    )
+    return manifest if same else None
+
+
+def write_night(
+    directory: Path,
+    config: Config,
+    ledger: Ledger,
+    manifest: dict,
+    *,
+    lap: Callable[[str], None] = lambda stage: None,
+) -> Verdict:
+    """Write the channels' tables and all that follows from them.
+
+    Raises
+    ------
+    OutputError
+        A file cannot be written; the old one still stands.
+    """
+    from dq.writers import write_table, write_transients_h5
+
+    manifest["state"] = "running"
+    write_manifest(directory, manifest)
+    attributes = ledger.channels.set_index("channel")
+    write_transients_h5(
+        directory / TRANSIENTS_FILE,
+        {
+            name: (table, _attributes(attributes.loc[name]))
+            for name, table in ledger.transients.items()
+        },
+    )
+    write_table(directory / CHANNELS_FILE, ledger.channels, NIGHT_CHANNELS)
+    write_table(directory / COVERAGE_FILE, ledger.coverage, COVERAGE)
+    lap("tables")
+    return write_verdict(directory, config, manifest, lap=lap)
+
+
+def _attributes(row) -> dict:
+    names = ("sample_rate_hz", "f_low_hz", "f_high_hz", "analysed_s")
+    return {name: float(row[name]) for name in names}
+
+
+def write_verdict(
+    directory: Path,
+    config: Config,
+    manifest: dict,
+    *,
+    lap: Callable[[str], None] = lambda stage: None,
+) -> Verdict:
+    """Judge a folder's channel tables again and write what follows from them.
+
+    The tables are read back from the folder, also within the night itself: what
+    ``dq veto`` does later is then the same by construction.
+    """
+    from dq.report import write_page
+    from dq.writers import write_table
+
+    ledger = read_ledger(directory, config.site.strain)
+    verdict = judge(ledger, config)
+    for name, reason in verdict.refused.items():
+        log.info("veto %s not chosen: %s", name, reason)
+    lap("witnesses and vetoes")
+    for name, table, columns in (
+        ("strain_transients.csv", verdict.strain, STRAIN_TRANSIENTS),
+        ("witnesses.csv", verdict.witnesses, WITNESSES),
+        ("vetoes.csv", verdict.vetoes, VETOES),
+        ("veto_cost.csv", verdict.cost, VETO_COST),
+    ):
+        write_table(directory / name, table, columns)
+    _write_machine_files(directory, ledger, verdict, manifest)
+    lap("files")
+    write_page(directory)
+    lap("page")
+    manifest["state"] = "finished"
+    manifest["files"] = _sizes(directory)
+    write_manifest(directory, manifest)
+    return verdict
+
+
+def _write_machine_files(
+    directory: Path, ledger: Ledger, verdict: Verdict, manifest: dict
+) -> None:
+
+    raise NotImplementedError
+
+
+def _sizes(directory: Path) -> dict[str, int]:
+    """Give the size of every output file; state, log and lock are no outputs."""
+    patterns = ("*.csv", "*.h5", "*.json", "*.html", "segments/*.txt")
+    return {
+        str(path.relative_to(directory)): path.stat().st_size
+        for pattern in patterns
+        for path in sorted(directory.glob(pattern))
+        if path.name not in (MANIFEST, LOG)
+    }
+
+
+def veto_again(directory: str | Path, *, max_dead_time: float | None = None) -> Verdict:
+    """Choose and cost vetoes again from a finished night; no data are read.
+
+    Parameters
+    ----------
+    directory : str or Path
+    max_dead_time : float, optional
+        Fraction of the analysed time; by default the night's own.
+
+    Returns
+    -------
+    Verdict
+
+    Raises
+    ------
+    InputError
+        The folder holds no finished night; nothing was written.
+    """
+    directory = Path(directory)
+    if read_manifest(directory)["state"] != "finished":
+        raise InputError(
+            f"the night in {str(directory)!r} is not finished; run dq night again"
+        )
+    with NightFolder(directory) as folder:
+        manifest = read_manifest(directory)
+        settings = manifest["config"]
+        if max_dead_time is not None:
+            settings["vetoes"]["max_dead_time"] = max_dead_time
+        config = parse_config(settings, where=str(directory / MANIFEST))
+        read_ledger(directory, config.site.strain)
+        folder.start_log()
+        if manifest["settings_sha256"] != digest(config):
+            # dq night with the file's own settings must notice the difference
+            manifest["settings_sha256"] = digest(config)
+            manifest["request_sha256"] = ""
+        manifest["state"] = "running"
+        write_manifest(directory, manifest)
+        return write_verdict(directory, config, manifest)

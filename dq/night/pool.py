@@ -1,0 +1,187 @@
+"""Channels analysed side by side in worker processes.
+
+One task is one channel. A worker writes the channel's state file itself and hands back
+only how it went, so the parent's memory does not grow with the night. Whatever goes
+wrong inside one channel costs that channel; a full disk or a dead worker ends the run,
+and the same command resumes.
+"""
+
+from __future__ import annotations
+
+import contextlib
+import multiprocessing
+import os
+import signal
+import threading
+from collections.abc import Iterable, Iterator
+from concurrent.futures import (
+    FIRST_COMPLETED,
+    Executor,
+    Future,
+    ProcessPoolExecutor,
+    wait,
+)
+from concurrent.futures.process import BrokenProcessPool
+from dataclasses import dataclass
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from dq.config import Config
+from dq.errors import DqError, OutputError
+from dq.night.folder import LOST
+from dq.segments import Segments
+
+if TYPE_CHECKING:
+    from dq.store import ChannelData
+
+#: Variables that hold the numerical libraries of a worker to one thread: the channels
+#: are the parallelism, and sums must not depend on a thread count.
+_ONE_THREAD = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
+
+
+@dataclass(frozen=True)
+class Task:
+    """One channel to analyse, with everything a worker needs."""
+
+    data: ChannelData
+    config: Config
+    ready: Segments
+    start_ns: int
+    end_ns: int
+    f_low_hz: float | None
+    f_high_hz: float | None
+    key: str
+    state: Path
+    weight: float
+
+    @property
+    def channel(self) -> str:
+        """The channel's name."""
+        return self.data.name
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """How one task went: ``error`` is empty when its state file stands."""
+
+    channel: str
+    error: str = ""
+
+
+def run_task(task: Task) -> Outcome:
+    """Analyse one channel and write its state file.
+
+    Raises
+    ------
+    OutputError
+        The state file cannot be written, or a file system went away.
+    """
+    from dq.night.channel import analyse_channel
+    from dq.night.state import save_state
+
+    try:
+        result = analyse_channel(
+            task.data,
+            ready=task.ready,
+            start_ns=task.start_ns,
+            end_ns=task.end_ns,
+            config=task.config,
+            f_low_hz=task.f_low_hz,
+            f_high_hz=task.f_high_hz,
+        )
+    except DqError as error:
+        return Outcome(task.channel, _line(str(error)))
+    except OSError as error:
+        if error.errno in LOST:
+            raise OutputError(
+                f"file system lost while reading {task.channel!r}: {error}; mount it "
+                "again and run the same command"
+            ) from error
+        return Outcome(task.channel, _line(f"cannot be read: {error}"))
+    except Exception as error:
+        return Outcome(
+            task.channel, _line(f"unexpected {type(error).__name__}: {error}")
+        )
+    save_state(task.state, task.key, result)
+    return Outcome(task.channel)
+
+
+def _line(text: str) -> str:
+    return " ".join(text.split())
+
+
+@contextlib.contextmanager
+def make_pool(jobs: int) -> Iterator[Executor]:
+    """Start worker processes; they end with the block, or with this process.
+
+    Parameters
+    ----------
+    jobs : int
+        Number of workers. One worker is a process too: it meets the same conditions
+        as several, so the results are the same.
+    """
+    before = {name: os.environ.get(name) for name in _ONE_THREAD}
+    os.environ.update(dict.fromkeys(_ONE_THREAD, "1"))
+    pool = ProcessPoolExecutor(
+        jobs,
+        mp_context=multiprocessing.get_context("spawn"),
+        initializer=_begin_worker,
+    )
+    try:
+        yield pool
+        pool.shutdown()
+    except BaseException:
+        pool.shutdown(wait=False, cancel_futures=True)
+        for child in multiprocessing.active_children():
+            child.terminate()
+            child.join()
+        raise
+    finally:
+        for name, value in before.items():
+            if value is None:
+                os.environ.pop(name, None)
+            else:
+                os.environ[name] = value
+
+
+def _begin_worker() -> None:
+    # Ctrl-C reaches the whole process group; the parent decides what ends.
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    parent = multiprocessing.parent_process()
+    threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
+
+
+def _end_with(parent) -> None:
+    # A killed parent leaves workers waiting for ever on a queue that they hold open.
+    parent.join()
+    os._exit(1)
+
+
+def run_tasks(tasks: Iterable[Task], pool: Executor, jobs: int) -> Iterator[Outcome]:
+    """Run the tasks in their order; give each outcome as it comes.
+
+    Few tasks wait in the pool at a time, so a stop does not find thousands queued.
+
+    Raises
+    ------
+    OutputError
+        A worker was killed or could not write.
+    """
+    queue = iter(tasks)
+    pending: set[Future[Outcome]] = set()
+    try:
+        while True:
+            for task in queue:
+                pending.add(pool.submit(run_task, task))
+                if len(pending) >= 2 * jobs:
+                    break
+            if not pending:
+                return
+            done, pending = wait(pending, return_when=FIRST_COMPLETED)
+            for future in done:
+                yield future.result()
+    except BrokenProcessPool as error:
+        raise OutputError(
+            "a worker process was killed (out of memory, or by hand); run the same "
+            "command to resume, with fewer --jobs if memory was short"
+        ) from error
