@@ -8,7 +8,7 @@ strain (``judge``) and writes the files (``outputs``); ``run`` puts these in ord
 """
 
 from dq.night.inputs import read_inputs
-from dq.night.outputs import veto_again
+from dq.night.outputs import report_again, veto_again
 from dq.night.run import NightOutcome, run_night
 
-__all__ = ["NightOutcome", "read_inputs", "run_night", "veto_again"]
+__all__ = ["NightOutcome", "read_inputs", "report_again", "run_night", "veto_again"]

@@ -172,6 +172,21 @@ def _sizes(directory: Path) -> dict[str, int]:
     }
 
 
+def finished_night(directory: Path) -> NightFolder:
+    """Give the folder of a finished night, to be entered.
+
+    Raises
+    ------
+    InputError
+        There is no night, or it was not finished.
+    """
+    if read_manifest(directory).get("state") != "finished":
+        raise InputError(
+            f"the night in {str(directory)!r} is not finished; run dq night again"
+        )
+    return NightFolder(directory)
+
+
 def veto_again(directory: str | Path, *, max_dead_time: float | None = None) -> Verdict:
     """Choose and cost vetoes again from a finished night; no data are read.
 
@@ -191,12 +206,8 @@ def veto_again(directory: str | Path, *, max_dead_time: float | None = None) -> 
         The folder holds no finished night; nothing was written.
     """
     directory = Path(directory)
-    if read_manifest(directory)["state"] != "finished":
-        raise InputError(
-            f"the night in {str(directory)!r} is not finished; run dq night again"
-        )
-    with NightFolder(directory) as folder:
-        manifest = read_manifest(directory)
+    with finished_night(directory) as folder:
+        manifest = folder.manifest()
         settings = manifest["config"]
         if max_dead_time is not None:
             settings["vetoes"]["max_dead_time"] = max_dead_time
@@ -208,5 +219,33 @@ def veto_again(directory: str | Path, *, max_dead_time: float | None = None) -> 
             manifest["settings_sha256"] = digest(config)
             manifest["request_sha256"] = ""
         manifest["state"] = "running"
-        write_manifest(directory, manifest)
+        folder.write_manifest(manifest)
         return write_verdict(directory, config, manifest)
+
+
+def report_again(directory: str | Path) -> Path:
+    """Write the page of a finished night again from its tables.
+
+    Parameters
+    ----------
+    directory : str or Path
+
+    Returns
+    -------
+    Path
+        The page.
+
+    Raises
+    ------
+    InputError
+        The folder holds no finished night; nothing was written.
+    """
+    from dq.report import write_page
+
+    directory = Path(directory)
+    with finished_night(directory) as folder:
+        manifest = folder.manifest()
+        write_page(directory)
+        manifest["files"] = _sizes(directory)
+        folder.write_manifest(manifest)
+    return directory / "index.html"
