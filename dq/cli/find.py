@@ -13,7 +13,8 @@ from dq.cli.verb import Verb
 @click.command(
     "find",
     cls=Verb,
-    example="dq find night-demo/site/dq.toml OV-STRAIN --start 1420000000 --end 1420000600",
+    example="dq find night-demo/site/dq.toml OV-STRAIN "
+    "--start 1420000000 --end 1420000600",
     short_help="Transients of one channel, as CSV on stdout.",
 )
 @click.argument("config")
@@ -44,11 +45,12 @@ def command(
 
     from dq.cli.progress import log_to_stderr
     from dq.config import load_config
-    from dq.night.find import find_in_channel, write_found
+    from dq.night.find import check_target, find_in_channel, write_found
 
     target = None if out is None else Path(out)
-    if target is not None and target.suffix not in (".csv", ".h5"):
-        raise click.UsageError(f"--out {out!r} must end in .csv or .h5")
+    if target is not None:
+        check_target(target)
+
     with log_to_stderr():
         result = find_in_channel(
             load_config(config), channel, start=start, end=end, snr_threshold=snr

@@ -89,14 +89,12 @@ def main(argv: Sequence[str] | None = None) -> int:
     int
         The exit code.
     """
+    arguments = list(sys.argv[1:] if argv is None else argv)
     state = {"debug": False}
     try:
-        result = root.main(
-            args=None if argv is None else list(argv),
-            prog_name="dq",
-            standalone_mode=False,
-            obj=state,
-        )
+        # click's own main would turn Ctrl-C and a closed pipe into its own messages
+        with root.make_context("dq", arguments, obj=state) as context:
+            result = root.invoke(context)
         sys.stdout.flush()
     except BrokenPipeError:
         _silence_stdout()
