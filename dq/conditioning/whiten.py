@@ -18,7 +18,6 @@ import numpy as np
 import scipy.fft
 
 
-
 def difference(values: np.ndarray) -> np.ndarray:
     """Give the second central difference; two samples shorter than the input."""
     values = np.asarray(values, dtype=np.float64)

@@ -192,9 +192,7 @@ class _FaultLog:
             if self._rows
             else (np.zeros(0, dtype=t) for t in (int, int, float, bool, bool))
         )
-        kinds = classify(
-            value, flat, plateau, lowest=self.lowest, highest=self.highest
-        )
+        kinds = classify(value, flat, plateau, lowest=self.lowest, highest=self.highest)
         out = {}
         for kind in ("saturation", "flat_line", "dropout"):
             chosen = kinds == kind

@@ -39,8 +39,7 @@ def to_ns(value) -> int:
         raise SegmentError(f"{value!r} is no GPS time in seconds") from error
     if not exact.is_finite() or abs(exact) > MAX_SECONDS:
         raise SegmentError(
-            f"GPS time {value} is out of range; it must lie within "
-            f"+-{MAX_SECONDS} s"
+            f"GPS time {value} is out of range; it must lie within +-{MAX_SECONDS} s"
         )
     scaled = exact.scaleb(9)
     whole = int(scaled.to_integral_value())

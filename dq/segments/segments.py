@@ -94,9 +94,7 @@ class Segments:
         return algebra.index_of(self._pair, times_ns)
 
     def pad(self, before_ns: int, after_ns: int | None = None) -> Segments:
-        """Widen by ``before_ns`` and ``after_ns`` (the same by default); negative
-        values shrink.
-        """
+        """Widen by ``before_ns`` and ``after_ns`` (default: the same); < 0 shrinks."""
         after_ns = before_ns if after_ns is None else after_ns
         return Segments(*algebra.pad(self._pair, int(before_ns), int(after_ns)))
 

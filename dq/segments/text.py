@@ -8,7 +8,7 @@ from dq.segments.segments import Segments
 
 
 def parse_segments(text: str, *, where: str = "segments") -> Segments:
-    """Read two columns; columns may be parted by blanks or a comma.
+    r"""Read two columns; columns may be parted by blanks or a comma.
 
     Parameters
     ----------
@@ -24,7 +24,7 @@ def parse_segments(text: str, *, where: str = "segments") -> Segments:
 
     Examples
     --------
-    >>> parse_segments("# ready\\n10 20\\n20 25.5\\n")
+    >>> parse_segments("# ready\n10 20\n20 25.5\n")
     Segments([10, 25.5))
     """
     pairs = []

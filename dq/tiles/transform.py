@@ -2,7 +2,7 @@
 
 A tile's coefficient is the inverse transform of the whitened spectrum under the row's
 window (Chatterji et al. 2004). With a window whose squares add up to 1 and a spectrum
-whose bins have mean square 1, the energy Z = \\|X\\|^2 has mean 1 in Gaussian noise and
+whose bins have mean square 1, the energy Z = X conj(X) has mean 1 in Gaussian noise and
 P(Z > z) = exp(-z); a matched signal of optimal SNR rho adds rho^2 / 2 to the mean.
 
 Several transforms ("items") go through each row together, since the FFT library works

@@ -58,7 +58,7 @@ def test_agrees_with_the_library_median_estimator(rng):
     sos = scipy.signal.butter(2, 60, fs=rate, output="sos")
     x = scipy.signal.sosfilt(sos, rng.standard_normal(int(rate * 200)))
     power = periodograms(x, sample_rate=rate, segment=segment, hop=segment // 2)
-    f, theirs = scipy.signal.welch(
+    _, theirs = scipy.signal.welch(
         x, rate, nperseg=segment, average="median", detrend=False
     )
     ours = median_mean(power)

@@ -85,8 +85,8 @@ def test_every_second_is_accounted_for_once(rng):
 
 def test_other_block_lengths_give_the_same_transients(rng):
     times = GPS + 20 + 37 * np.arange(10) + rng.random(10)
-    shape = zip(20 * 8 ** rng.random(10), 5 + 40 * rng.random(10), strict=True)
-    bursts = [(t, f, q, 6.5 + i) for i, (t, (f, q)) in enumerate(zip(times, shape))]
+    f0, q = 20 * 8 ** rng.random(10), 5 + 40 * rng.random(10)
+    bursts = list(zip(times, f0, q, 6.5 + np.arange(10), strict=True))
     data = make(rng, bursts=bursts)
     results = {b: analyse(data, settings=config(block_s=b)) for b in (32, 64, 128)}
     reference = results[64].transients
@@ -94,7 +94,9 @@ def test_other_block_lengths_give_the_same_transients(rng):
         other = results[b].transients
         for one, two in ((reference, other), (other, reference)):
             for _, row in one[one.snr >= 6.0].iterrows():
-                found = two[(two.gps_start < row.gps_end) & (two.gps_end > row.gps_start)]
+                found = two[
+                    (two.gps_start < row.gps_end) & (two.gps_end > row.gps_start)
+                ]
                 assert len(found) == 1
                 # the time grid differs: a tile may lose d^2 / 4 = 6.7 % of energy
                 assert found.snr.iloc[0] == pytest.approx(row.snr, rel=0.08)

@@ -1,11 +1,12 @@
-"""Real records for a night: the seismometers that the obspy package ships.
+r"""Real records for a night: the seismometers that the obspy package ships.
 
 Four stations of one network recorded local earthquakes on 27 May 2010 (230 s at 50 and
 100 Hz). The script writes them in the tool's layout, with one station as the main
 channel and the others as auxiliary ones::
 
     python tests/real/seismometers.py earthquakes
-    dq night earthquakes/dq.toml --start 959012658 --end 959012889 --out earthquakes/night
+    dq night earthquakes/dq.toml --start 959012658 --end 959012890 \
+        --out earthquakes/night
 """
 
 from __future__ import annotations

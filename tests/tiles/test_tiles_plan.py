@@ -31,9 +31,7 @@ WORKED = {
 def test_planned_counts_equal_the_worked_case(mismatch):
     rows, tiles = WORKED[mismatch]
     planes = plane_qs(4, 64, mismatch)
-    np.testing.assert_allclose(
-        planes, [5.6569, 11.3137, 22.6274, 45.2548], atol=5e-5
-    )
+    np.testing.assert_allclose(planes, [5.6569, 11.3137, 22.6274, 45.2548], atol=5e-5)
     for q, n_rows, n_tiles in zip(planes, rows, tiles, strict=True):
         f = row_frequencies(q, 10, highest_frequency(q, 4096), mismatch)
         assert len(f) == n_rows
@@ -43,8 +41,9 @@ def test_planned_counts_equal_the_worked_case(mismatch):
 @pytest.mark.reference
 def test_fine_mismatch_needs_eight_planes():
     planes = plane_qs(4, 64, 0.05)
-    counts = [len(row_frequencies(q, 10, highest_frequency(q, 4096), 0.05)) for q in
-              planes]
+    counts = [
+        len(row_frequencies(q, 10, highest_frequency(q, 4096), 0.05)) for q in planes
+    ]
     np.testing.assert_allclose(planes[[0, -1]], [4.7568, 53.8174], atol=5e-5)
     assert counts == [47, 66, 94, 134, 191, 272, 387, 549]
     assert len(plane_qs(Q_MIN, 100, 0.2)) == 5

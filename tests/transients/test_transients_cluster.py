@@ -108,9 +108,7 @@ def test_overlap_pairs_are_all_pairs(rng):
         for left, right in overlap_pairs(start, end)
         for a, b in zip(left, right, strict=True)
     }
-    want = {
-        (i, j) for i in range(200) for j in range(i + 1, 200) if start[j] < end[i]
-    }
+    want = {(i, j) for i in range(200) for j in range(i + 1, 200) if start[j] < end[i]}
     assert got == want
 
 
@@ -155,9 +153,7 @@ def test_open_clusters_wait_for_the_next_batch():
 
 def test_three_points_of_a_gaussian_give_its_top():
     for shift in (-0.4, 0.0, 0.31):
-        before, peak, after = (
-            50 * np.exp(-1.1 * (k - shift) ** 2) for k in (-1, 0, 1)
-        )
+        before, peak, after = (50 * np.exp(-1.1 * (k - shift) ** 2) for k in (-1, 0, 1))
         assert peak_shift(
             np.array([before]), np.array([peak]), np.array([after])
         ) == pytest.approx(shift, abs=1e-9)

@@ -1,0 +1,59 @@
+"""The other small input files: ready segments and test signals."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from dq.errors import InputError, SegmentError
+from dq.segments import Segments, parse_segments, to_ns
+from dq.store.channels import positive, read_rows, read_text
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+
+def read_ready(path: Path) -> Segments:
+    """Read ready segments: two columns, ``#`` comments.
+
+    Raises
+    ------
+    InputError
+    """
+    text = read_text(path, "ready segments")
+    return parse_segments(text, where=f"ready segments {str(path)!r}")
+
+
+def read_injections(path: Path) -> pd.DataFrame:
+    """Read test signals actuated into the detector.
+
+    Returns
+    -------
+    pandas.DataFrame
+        Columns ``gps_time`` (s), ``kind`` (text), ``snr`` (NaN where not given).
+
+    Raises
+    ------
+    InputError
+    """
+    import pandas as pd
+
+    what = "injections"
+    rows = read_rows(path, what, ("gps_time",), ("gps_time", "kind", "snr"))
+    times, kinds, snrs = [], [], []
+    for row in rows:
+        where = f"{what} {str(path)!r} line {row['line']}"
+        try:
+            times.append(to_ns(row["gps_time"]) / 1e9)
+        except SegmentError as error:
+            raise InputError(f"{where}: {error}") from error
+        kinds.append(row.get("kind", ""))
+        snr = positive(row, "snr", where)
+        snrs.append(float("nan") if snr is None else snr)
+    return pd.DataFrame(
+        {
+            "gps_time": pd.Series(times, dtype="float64"),
+            "kind": pd.Series(kinds, dtype="string"),
+            "snr": pd.Series(snrs, dtype="float64"),
+        }
+    )
