@@ -14,6 +14,7 @@ import numpy as np
 import pandas as pd
 
 from dq.errors import InputError
+from dq.segments import seconds_text, to_ns
 
 
 @dataclass(frozen=True)
@@ -211,23 +212,6 @@ def conform(table: pd.DataFrame, columns: tuple[Column, ...]) -> pd.DataFrame:
     return pd.DataFrame(out, columns=names)
 
 
-def seconds_text(time_ns: int) -> str:
-    """Write integer nanoseconds as exact decimal seconds without idle zeros.
-
-    Examples
-    --------
-    >>> seconds_text(1_400_000_000_500_000_000)
-    '1400000000.5'
-    >>> seconds_text(-250_000_000)
-    '-0.25'
-    """
-    sign = "-" if time_ns < 0 else ""
-    whole, rest = divmod(abs(int(time_ns)), 1_000_000_000)
-    if rest == 0:
-        return f"{sign}{whole}"
-    return f"{sign}{whole}." + f"{rest:09d}".rstrip("0")
-
-
 def format_column(values: pd.Series, column: Column) -> list[str]:
     """Format one column for a CSV file; a missing value is an empty cell."""
     if column.kind == "time_ns":
@@ -290,16 +274,10 @@ def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
 
 def _parse_column(cells: pd.Series, column: Column) -> pd.Series:
     if column.kind == "time_ns":
-        return cells.map(_time_ns).astype("int64")
+        return cells.map(to_ns).astype("int64")
     known = cells.mask(cells == "")
     if column.kind == "flag":
         return known.map({"yes": True, "no": False})
     if column.kind in ("int", "float"):
         return pd.to_numeric(known)
     return known
-
-
-def _time_ns(text: str) -> int:
-    from decimal import Decimal
-
-    return int(Decimal(text) * 1_000_000_000)

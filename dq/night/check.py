@@ -6,9 +6,8 @@ from dataclasses import dataclass, field
 
 from dq.errors import DqError, NoDataError
 from dq.night.inputs import Inputs, nearest
-from dq.segments import Segments
+from dq.segments import Segments, seconds_text
 from dq.store import Channel
-from dq.tables import seconds_text
 
 #: Largest relative difference of a listed and a recorded rate that is no remark; rates
 #: of clocks differ by parts in a million (common practice).

@@ -24,6 +24,7 @@ from dq.night.ledger import (
     read_ledger,
 )
 from dq.night.plan import NightPlan
+from dq.segments import seconds_text
 from dq.tables import (
     COVERAGE,
     NIGHT_CHANNELS,
@@ -31,7 +32,6 @@ from dq.tables import (
     VETO_COST,
     VETOES,
     WITNESSES,
-    seconds_text,
 )
 
 log = logging.getLogger(__name__)
