@@ -106,7 +106,7 @@ def highest_frequency(q: float, sample_rate: float) -> float:
 
 
 def bisquare(x: np.ndarray) -> np.ndarray:
-    """Give the unnormalised bisquare window (1 - x^2)^2 for absolute x below 1, else 0."""
+    """Give the unnormalised bisquare window (1 - x^2)^2, 0 outside -1..1."""
     inside = np.abs(x) < 1.0
     return np.where(inside, (1.0 - np.square(x)) ** 2, 0.0)
 
