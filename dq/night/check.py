@@ -27,15 +27,12 @@ class Findings:
         What was found, in the order of reading.
     odd : list of str
         Usable, but perhaps not meant so.
-    missing : list of str
-        On the list, and in no file.
     unusable : list of str
-        What a night would leave out; includes ``missing``.
+        What a night would leave out.
     """
 
     facts: list[tuple[str, str]] = field(default_factory=list)
     odd: list[str] = field(default_factory=list)
-    missing: list[str] = field(default_factory=list)
     unusable: list[str] = field(default_factory=list)
 
     def text(self) -> str:
@@ -82,12 +79,14 @@ def check_inputs(inputs: Inputs) -> Findings:
     _check_ready(found, inputs, recorded)
     if inputs.injections is not None:
         found.facts.append(("test signals", str(len(inputs.injections))))
-    for problem in store.problems:
-        name = f"{problem.channel}: " if problem.channel else ""
-        found.unusable.append(f"{name}{problem.where}: {problem.text}")
+    names = {c.name for c in listed}
+    for where, channel, text in inputs.problems:
+        if channel is None or channel in names:
+            found.unusable.append(f"{where}: {text}")
+        else:
+            found.odd.append(f"{where}: {text}; the channel is not on the list")
     for row in listed:
         _check_channel(found, inputs, row)
-    found.unusable += [f"{name}: in none of the data files" for name in found.missing]
     _check_unused(found, inputs)
     return found
 
@@ -96,7 +95,7 @@ def _strain_recorded(inputs: Inputs) -> Segments:
     name, store = inputs.strain.name, inputs.store
     if name not in store.channels:
         raise NoDataError(
-            f"strain {name!r} is in none of the data files; check data.files and "
+            f"strain {name!r}: {inputs.why_absent(name)}; check data.files and "
             f"site.strain{nearest(name, store.channels)}"
         )
     try:
@@ -127,7 +126,8 @@ def _check_ready(found: Findings, inputs: Inputs, recorded: Segments) -> None:
 
 def _check_channel(found: Findings, inputs: Inputs, row: Channel) -> None:
     if row.name not in inputs.store.channels:
-        found.missing.append(row.name)
+        text = inputs.why_absent(row.name)
+        found.unusable.append(f"{row.name}: {text}")
         return
     try:
         data = inputs.store.channel(row.name)

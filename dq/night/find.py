@@ -7,8 +7,9 @@ from pathlib import Path
 
 from dq.config import Config, parse_config
 from dq.errors import ChannelError, InputError, NoDataError, OutputError
-from dq.night.channel import ChannelResult, analyse_channel
+from dq.night.channel import ChannelResult
 from dq.night.inputs import check_range, nearest, read_inputs
+from dq.night.usable import usable_result
 
 log = logging.getLogger(__name__)
 
@@ -58,7 +59,7 @@ def find_in_channel(
     row = next((c for c in inputs.channels if c.name == channel), None)
     data = inputs.store.channel(channel)
     try:
-        result = analyse_channel(
+        result = usable_result(
             data,
             ready=inputs.wanted,
             start_ns=start_ns,

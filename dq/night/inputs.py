@@ -66,6 +66,22 @@ class Inputs:
         return [c for c in self.channels if c.role == "auxiliary"]
 
     @property
+    def problems(self) -> list[tuple[str, str | None, str]]:
+        """What is wrong in the files: where (relative), whose channel, and what."""
+        base = f"{self.config.base.resolve()}/"
+        return [
+            (str(p.where).removeprefix(base), p.channel, p.text)
+            for p in self.store.problems
+        ]
+
+    def why_absent(self, name: str) -> str:
+        """Say why a channel is not in the store."""
+        for where, channel, text in self.problems:
+            if channel == name:
+                return f"{text} ({where})"
+        return "no data: it is in none of the data files"
+
+    @property
     def wanted(self) -> Segments:
         """The time that is wanted at all."""
         return ALL_TIME if self.ready is None else self.ready
@@ -151,13 +167,13 @@ def check_strain_time(inputs: Inputs, start_ns: int, end_ns: int) -> None:
     span = f"{start_ns / _NS:.10g}..{end_ns / _NS:.10g}"
     if name not in inputs.store.channels:
         raise NoDataError(
-            f"strain {name!r} is in none of the data files; check data.files and "
+            f"strain {name!r}: {inputs.why_absent(name)}; check data.files and "
             f"site.strain{nearest(name, inputs.store.channels)}"
         )
     wanted = inputs.wanted.clip(start_ns, end_ns)
     if not wanted:
         raise NoDataError(
-            f"no ready time in {span}; check the range and {inputs.config.data.ready!r}"
+            f"no ready time in {span}; check the range and the ready segments"
         )
     recorded = inputs.store.channel(name).recorded
     if not recorded:
@@ -172,7 +188,8 @@ def check_strain_time(inputs: Inputs, start_ns: int, end_ns: int) -> None:
 
 def nearest(name: str, known: list[str]) -> str:
     """Give a hint that names the nearest known name, or nothing."""
-    near = difflib.get_close_matches(name, known, n=1)
+    near = [k for k in known if k.lower() == name.lower()]
+    near = near or difflib.get_close_matches(name, known, n=1)
     return f"; nearest is {near[0]!r}" if near else ""
 
 

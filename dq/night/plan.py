@@ -106,7 +106,7 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
 def _task(plan: NightPlan, row: Channel, state: Path) -> Task:
     inputs = plan.inputs
     if row.name not in inputs.store.channels:
-        raise NoDataError("no data: it is in none of the data files")
+        raise NoDataError(inputs.why_absent(row.name))
     data = inputs.store.channel(row.name)
     recorded = data.recorded & plan.wanted
     if not recorded:

@@ -76,11 +76,11 @@ def run_task(task: Task) -> Outcome:
     OutputError
         The state file cannot be written, or a file system went away.
     """
-    from dq.night.channel import analyse_channel
     from dq.night.state import save_state
+    from dq.night.usable import usable_result
 
     try:
-        result = analyse_channel(
+        result = usable_result(
             task.data,
             ready=task.ready,
             start_ns=task.start_ns,

@@ -103,7 +103,8 @@ def run_night(
             return _outcome(out, done, clock, nothing_to_do=True)
         results, failed = _channels(plan, folder, jobs or os.cpu_count() or 1, progress)
         clock.lap("channels")
-        left_out = plan.left_out | failed | _problems(inputs)
+        left_out = plan.left_out | failed
+        left_out |= _problems(inputs, left_out)
         for name, reason in sorted(left_out.items()):
             log.warning("left out: %s: %s", name, reason)
         ledger = make_ledger([inputs.strain, *inputs.auxiliary], results, left_out)
@@ -149,13 +150,18 @@ def _channels(
     return {k: v for k, v in results.items() if v is not None}, failed
 
 
-def _problems(inputs: Inputs) -> dict[str, str]:
-    """Give what is wrong with files, by file; channels' own problems are theirs."""
-    found: dict[str, str] = {}
-    for problem in inputs.store.problems:
-        name = problem.channel or str(problem.where)
-        found.setdefault(name, problem.text)
-    return found
+def _problems(inputs: Inputs, left_out: dict[str, str]) -> dict[str, str]:
+    """Give the files and datasets that could not be used, with the reason.
+
+    A channel that is left out altogether has its reason already; what is wrong with
+    channels that are not on the list costs nothing.
+    """
+    used = {inputs.strain.name, *(c.name for c in inputs.auxiliary)} - set(left_out)
+    return {
+        where: text
+        for where, channel, text in inputs.problems
+        if channel is None or channel in used
+    }
 
 
 def _outcome(

@@ -115,7 +115,7 @@ def test_check_names_what_is_odd_and_unusable(small_site, capsys):
     (config.parent / "raw" / "b.h5").write_bytes(b"this is no HDF5 file")
     assert main(["check", str(config)]) == 3
     out = capsys.readouterr().out
-    assert "OV-GONE: in none of the data files" in out
+    assert "OV-GONE: no data: it is in none of the data files" in out
     assert "OV-A: recorded at 256 Hz, listed as 250 Hz" in out
     assert "in the files, not on the list: OV-B" in out
     assert "b.h5" in out
