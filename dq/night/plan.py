@@ -56,6 +56,11 @@ class NightPlan:
         return Segments.of([(self.start_ns, self.end_ns)])
 
     @property
+    def reach(self) -> Segments:
+        """The time whose data and ready segments can touch the results."""
+        return self.span.pad(_REACH_S * _NS)
+
+    @property
     def wanted(self) -> Segments:
         """The ready time of the range."""
         return self.inputs.wanted & self.span
@@ -98,7 +103,9 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
     plan.request = _sha256(
         digest(inputs.config), inputs.texts, [start_ns, end_ns], keys, plan.left_out
     )
-    contents = {t.channel: inputs.store.content_id(t.channel) for t in plan.tasks}
+    contents = {
+        t.channel: inputs.store.content_id(t.channel, plan.reach) for t in plan.tasks
+    }
     plan.inputs_sha256 = _sha256(inputs.texts, contents)
     return plan
 
@@ -130,8 +137,7 @@ def _key(plan: NightPlan, row: Channel) -> str:
     from dq import __version__
 
     inputs, config = plan.inputs, plan.inputs.config
-    low = max(plan.start_ns - _REACH_S * _NS, 0)
-    ready = inputs.wanted.clip(low, plan.end_ns + _REACH_S * _NS)
+    ready = inputs.wanted & plan.reach
     return _sha256(
         STATE_SCHEMA,
         __version__,
@@ -140,7 +146,7 @@ def _key(plan: NightPlan, row: Channel) -> str:
         [row.f_low_hz, row.f_high_hz],
         [plan.start_ns, plan.end_ns],
         [ready.starts.tolist(), ready.ends.tolist()],
-        inputs.store.fingerprint(row.name),
+        inputs.store.fingerprint(row.name, plan.reach),
     )
 
 

@@ -70,21 +70,31 @@ class Store:
             ends.append(mask.start_ns + edges[1::2] * NS)
         return Segments(np.concatenate(starts), np.concatenate(ends))
 
-    def fingerprint(self, name: str) -> str:
+    def fingerprint(self, name: str, span: Segments | None = None) -> str:
         """Give a digest that changes when the channel's files change.
 
         Sizes, modification times and headers go in, samples do not: reading a night
         twice only to see that nothing changed would double its cost.
+
+        Parameters
+        ----------
+        name : str
+        span : Segments, optional
+            Only what is recorded here counts; without it, everything does. Files that
+            arrive later for other times then change nothing.
         """
-        return self._digest(name, with_time=True)
+        return self._digest(name, span, with_time=True)
 
-    def content_id(self, name: str) -> str:
+    def content_id(self, name: str, span: Segments | None = None) -> str:
         """Give the same digest without modification times: copies are equal."""
-        return self._digest(name, with_time=False)
+        return self._digest(name, span, with_time=False)
 
-    def _digest(self, name: str, *, with_time: bool) -> str:
+    def _digest(self, name: str, span: Segments | None, *, with_time: bool) -> str:
         rows = []
         for stretch in sorted(self._by_channel[name], key=astuple):
+            time = Segments.of([(stretch.start_ns, stretch.end_ns)])
+            if span is not None and not time & span:
+                continue
             path = self._paths[stretch.file]
             status = path.stat()
             row = [_relative(path, self._base), status.st_size, str(stretch.rate)]

@@ -288,3 +288,17 @@ def test_one_and_two_workers_give_the_same_tables(small_site, tmp_path, tree_of)
         assert night(config, tmp_path / f"jobs{jobs}", jobs=jobs).exit_code == 3
     one, two = tables(tree_of(tmp_path / "jobs1")), tables(tree_of(tmp_path / "jobs2"))
     assert one == two
+
+
+def test_files_of_another_day_change_nothing(small_site, tmp_path, here, count):
+    import h5py
+    import numpy as np
+
+    config, out = small_site(dead=False), tmp_path / "night"
+    night(config, out)
+    count.clear()
+    with h5py.File(config.parent / "raw" / "tomorrow.h5", "w") as file:
+        data = file.create_dataset("OV-STRAIN", data=np.ones(512))
+        data.attrs["gps_start"], data.attrs["sample_rate"] = SITE_START + 86400, 512
+    assert night(config, out).nothing_to_do
+    assert count == []
