@@ -1,0 +1,69 @@
+"""The night in numbers, for ``summary.json``."""
+
+from __future__ import annotations
+
+import numpy as np
+import pandas as pd
+
+from dq.night.judge import Verdict
+from dq.night.ledger import Ledger
+from dq.segments import NS, to_ns
+
+#: What no stage can tell yet; a program finds the key, and null.
+_UNKNOWN = None
+
+
+def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
+    """Give the values of the summary.
+
+    Parameters
+    ----------
+    ledger : Ledger
+    verdict : Verdict
+    manifest : dict
+
+    Returns
+    -------
+    dict
+        Keys of ``dq.writers.write_summary``; ``missing`` lists ``[start, end)`` of the
+        strain in GPS seconds, ``channels.ok`` counts.
+    """
+    start_ns, end_ns = to_ns(manifest["gps_start"]), to_ns(manifest["gps_end"])
+    missing = ledger.time("missing")[ledger.strain]
+    total = _total_row(verdict.cost)
+    strain = verdict.strain
+    traced = strain["witness"].fillna("") != ""
+    return {
+        "requested_s": (end_ns - start_ns) / NS,
+        "recorded_s": manifest["recorded_s"],
+        "analysed_s": verdict.analysed.total_s,
+        "missing": [[low / NS, high / NS] for low, high in missing],
+        "strain_transients": len(strain),
+        "families": {
+            str(name): int(count)
+            for name, count in strain["family"].value_counts().sort_index().items()
+        },
+        "untraced_fraction": float(1 - traced.mean()) if len(strain) else _UNKNOWN,
+        "vetoes": list(dict.fromkeys(verdict.vetoes["veto"])),
+        "dead_time_s": total["dead_time_s"],
+        "dead_time_fraction": total["dead_time_fraction"],
+        "efficiency": {
+            "all": total["efficiency"],
+            "snr8": total["efficiency_snr8"],
+            "snr20": total["efficiency_snr20"],
+        },
+        "volume_time_ratio": {"value": _UNKNOWN, "low": _UNKNOWN, "high": _UNKNOWN},
+        "channels": {
+            "ok": len(ledger.transients),
+            "left_out": manifest["left_out"],
+        },
+        "settings_sha256": manifest["settings_sha256"],
+        "inputs_sha256": manifest["inputs_sha256"],
+    }
+
+
+def _total_row(cost: pd.DataFrame) -> dict[str, float]:
+    row = cost[cost["veto"] == "all"].iloc[0]
+    names = ("dead_time_s", "dead_time_fraction")
+    names += ("efficiency", "efficiency_snr8", "efficiency_snr20")
+    return {n: np.nan if pd.isna(row[n]) else float(row[n]) for n in names}
