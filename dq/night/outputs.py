@@ -24,7 +24,8 @@ from dq.night.ledger import (
     read_ledger,
 )
 from dq.night.plan import NightPlan
-from dq.segments import seconds_text
+from dq.night.summary import summarise_night
+from dq.segments import seconds_text, to_ns
 from dq.tables import (
     COVERAGE,
     NIGHT_CHANNELS,
@@ -157,8 +158,18 @@ def write_verdict(
 def _write_machine_files(
     directory: Path, ledger: Ledger, verdict: Verdict, manifest: dict
 ) -> None:
+    from dq.writers import write_quality_mask, write_segments_folder, write_summary
 
-    raise NotImplementedError
+    write_segments_folder(directory, analysed=verdict.analysed, vetoes=verdict.vetoes)
+    write_quality_mask(
+        directory / "quality_mask.h5",
+        start_ns=to_ns(manifest["gps_start"]),
+        end_ns=to_ns(manifest["gps_end"]),
+        analysed=verdict.analysed,
+        vetoes=verdict.vetoes,
+    )
+    values = summarise_night(ledger, verdict, manifest)
+    write_summary(directory / "summary.json", values)
 
 
 def _sizes(directory: Path) -> dict[str, int]:
