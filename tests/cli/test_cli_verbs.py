@@ -153,23 +153,28 @@ def test_report_writes_the_page_again(done, capsys):
     assert (out / "index.html").stat().st_size > 1000
 
 
-def children(pid):
-    """Give the process ids of a process's children."""
-    path = f"/proc/{pid}/task/{pid}/children"
+def workers(pid):
+    """Give the process ids of a night's worker processes."""
+    found = []
     try:
-        with open(path) as file:
-            return [int(word) for word in file.read().split()]
+        with open(f"/proc/{pid}/task/{pid}/children") as file:
+            children = file.read().split()
+        for child in children:
+            with open(f"/proc/{child}/cmdline") as file:
+                if "spawn_main" in file.read():
+                    found.append(int(child))
     except OSError:
-        return []
+        pass
+    return found
 
 
 def workers_of(process):
-    """Wait until a worker works in the night's folder; give the children's ids."""
-    for _ in range(600):
-        if process.poll() is not None or len(children(process.pid)) >= 2:
+    """Wait until a night has a worker; give the workers' ids."""
+    for _ in range(1200):
+        if process.poll() is not None or workers(process.pid):
             break
-        time.sleep(0.05)
-    return children(process.pid)
+        time.sleep(0.025)
+    return workers(process.pid)
 
 
 def alive(pid):
@@ -189,18 +194,18 @@ def test_a_killed_night_leaves_no_process_and_resumes(small_site, tmp_path, name
     with subprocess.Popen(
         command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
     ) as process:
-        workers = workers_of(process)
+        started = workers_of(process)
         process.send_signal(getattr(signal, name))
         err = process.communicate(timeout=60)[1]
-    assert workers
+    assert started
     if name == "SIGINT":
         assert process.returncode == 130
         assert err.splitlines()[-1].startswith("dq: error: interrupted")
     for _ in range(100):
-        if not any(alive(pid) for pid in workers):
+        if not any(alive(pid) for pid in started):
             break
         time.sleep(0.1)
-    assert not any(alive(pid) for pid in workers)
+    assert not any(alive(pid) for pid in started)
     ran = subprocess.run(command, capture_output=True, text=True, check=False)
     assert ran.returncode == 0, ran.stderr
 
