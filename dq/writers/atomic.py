@@ -1,4 +1,4 @@
-"""Files written beside and renamed: a reader sees the old file or the new one, whole."""
+"""Files written beside and renamed: a reader sees the old or the new one, whole."""
 
 from __future__ import annotations
 

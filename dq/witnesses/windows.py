@@ -1,0 +1,86 @@
+"""Windows around a channel's transients, and how time and events fall into them."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from dq.segments import NS, Segments, to_ns_array
+
+
+def veto_windows(transients, *, snr_threshold: float, half_window_s: float) -> Segments:
+    """Give the union of windows around the transients at or above a threshold.
+
+    Parameters
+    ----------
+    transients : pandas.DataFrame
+        Columns ``gps_time`` and ``snr``.
+    snr_threshold : float
+    half_window_s : float
+        A window is ``[t - w, t + w)`` around each peak time.
+
+    Returns
+    -------
+    Segments
+    """
+    loud = transients["snr"].to_numpy(float) >= snr_threshold
+    times = to_ns_array(transients["gps_time"].to_numpy(float)[loud])
+    half = round(half_window_s * NS)
+    return Segments.from_arrays(times - half, times + half)
+
+
+def union_of_windows(times: np.ndarray, half: int) -> tuple[np.ndarray, np.ndarray]:
+    """Give starts and ends of the union of windows around sorted times.
+
+    Parameters
+    ----------
+    times : ndarray of int64, sorted
+        Nanoseconds.
+    half : int
+        Half-width, nanoseconds.
+    """
+    if len(times) == 0:
+        return times, times
+    breaks = np.flatnonzero(np.diff(times) > 2 * half)
+    starts = times[np.append(0, breaks + 1)] - half
+    ends = times[np.append(breaks, len(times) - 1)] + half
+    return starts, ends
+
+
+class FusedTime:
+    """Segments laid end to end: a position is the covered time before a moment.
+
+    Parameters
+    ----------
+    segments : Segments
+        At least one.
+    """
+
+    def __init__(self, segments: Segments):
+        lengths = segments.ends - segments.starts
+        self._starts = segments.starts
+        self._lengths = lengths
+        self._before = np.cumsum(lengths) - lengths
+        self.total = int(lengths.sum())
+
+    def position(self, times: np.ndarray) -> np.ndarray:
+        """Give the covered time before each moment, nanoseconds."""
+        index = np.searchsorted(self._starts, times, side="right") - 1
+        safe = np.maximum(index, 0)
+        inside = np.minimum(times - self._starts[safe], self._lengths[safe])
+        return np.where(index < 0, 0, self._before[safe] + inside)
+
+
+def hits(positions: np.ndarray, starts: np.ndarray, ends: np.ndarray) -> np.ndarray:
+    """Give for each position the number of the window that holds it, or -1.
+
+    Parameters
+    ----------
+    positions : ndarray of int64
+    starts, ends : ndarray of int64
+        Sorted, disjoint, half-open.
+    """
+    if len(starts) == 0:
+        return np.full(positions.shape, -1)
+    index = np.searchsorted(starts, positions, side="right") - 1
+    inside = (index >= 0) & (positions < ends[np.maximum(index, 0)])
+    return np.where(inside, index, -1)
