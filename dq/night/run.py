@@ -101,7 +101,7 @@ def run_night(
         if done is not None:
             log.info("nothing to do: %s holds this very night", out)
             return _outcome(out, done, clock, nothing_to_do=True)
-        results, failed = _channels(plan, folder, jobs or os.cpu_count() or 1, progress)
+        results, failed = _channels(plan, folder, jobs or _processors(), progress)
         clock.lap("channels")
         left_out = plan.left_out | failed
         left_out |= _problems(inputs, left_out)
@@ -175,6 +175,13 @@ def _outcome(
         seconds=clock.seconds,
         nothing_to_do=nothing_to_do,
     )
+
+
+def _processors() -> int:
+    # what this process may use, which in a container is not what the machine has
+    if hasattr(os, "sched_getaffinity"):
+        return len(os.sched_getaffinity(0))
+    return os.cpu_count() or 1
 
 
 class _Clock:
