@@ -79,10 +79,17 @@ def judge(ledger: Ledger, config: Config) -> Verdict:
         analysed=analysed,
         max_dead_time=config.vetoes.max_dead_time,
     )
-    vetoes = built[built["veto"].isin(chosen)].reset_index(drop=True)
+    vetoes = _in_order(built, chosen)
     cost = cost_of(vetoes, strain, analysed=analysed)
     table = strain_table(strain, witnesses, auxiliary, vetoes)
     return Verdict(table, witnesses, vetoes, cost, analysed, refused)
+
+
+def _in_order(built: pd.DataFrame, chosen: list[str]) -> pd.DataFrame:
+    """Keep the chosen vetoes, in the order of choice: ``added`` costs follow it."""
+    place = built["veto"].map({name: i for i, name in enumerate(chosen)})
+    order = np.argsort(place[place.notna()].to_numpy(int), kind="stable")
+    return built[place.notna().to_numpy()].iloc[order].reset_index(drop=True)
 
 
 def strain_table(

@@ -144,9 +144,21 @@ def make_pool(jobs: int) -> Iterator[Executor]:
                 os.environ[name] = value
 
 
+@contextlib.contextmanager
+def _uninterrupted() -> Iterator[None]:
+    """Hold Ctrl-C back while a worker may be starting.
+
+    The worker inherits the block: Ctrl-C reaches the whole process group, and what
+    ends is for the parent to decide.
+    """
+    before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, before)
+
+
 def _begin_worker() -> None:
-    # Ctrl-C reaches the whole process group; the parent decides what ends.
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
     parent = multiprocessing.parent_process()
     threading.Thread(target=_end_with, args=(parent,), daemon=True).start()
 
@@ -172,7 +184,8 @@ def run_tasks(tasks: Iterable[Task], pool: Executor, jobs: int) -> Iterator[Outc
     try:
         while True:
             for task in queue:
-                pending.add(pool.submit(run_task, task))
+                with _uninterrupted():
+                    pending.add(pool.submit(run_task, task))
                 if len(pending) >= 2 * jobs:
                     break
             if not pending:
