@@ -1,4 +1,4 @@
-"""Counting statistics: chance of coincidences, and exact intervals for small numbers."""
+"""Counting statistics: chance of coincidences, exact intervals of small numbers."""
 
 from __future__ import annotations
 
