@@ -82,14 +82,20 @@ class Resonance:
     width_hz: float
 
 
-def lorentzian(frequency: np.ndarray, line: Resonance, *, width_hz=None) -> np.ndarray:
-    """Give a line's density; its integral is ``rms``^2 whatever the width.
+def line_density(
+    frequency: np.ndarray, line: Resonance, *, resolution_hz: float = 0.0
+) -> np.ndarray:
+    """Give a line's density; its integral is ``rms``^2 whatever the shape.
 
-    ``width_hz`` replaces the line's own width, for instance by the resolution of a
-    measurement that cannot resolve it.
+    A Lorentzian of the line's width; where the resolution (full width, Hz) is coarser,
+    a Gaussian of that width, which like a good window has no far wings.
     """
-    half = 0.5 * (line.width_hz if width_hz is None else width_hz)
     offset = np.asarray(frequency, dtype=np.float64) - line.frequency_hz
+    if resolution_hz > line.width_hz:
+        sigma = resolution_hz / np.sqrt(8.0 * np.log(2.0))
+        shape = np.exp(-0.5 * (offset / sigma) ** 2)
+        return line.rms**2 * shape / (np.sqrt(2 * np.pi) * sigma)
+    half = 0.5 * line.width_hz
     return line.rms**2 * half / (np.pi * (offset**2 + half**2))
 
 
@@ -219,6 +225,7 @@ class SensorNoise:
         f = np.hypot(np.asarray(frequency, dtype=np.float64), self.flat_hz)
         density = self.floor**2 * (1.0 + (self.knee_hz / f) ** self.slope)
         for line in self.resonances:
-            width = max(line.width_hz, resolution_hz)
-            density = density + lorentzian(frequency, line, width_hz=width)
+            density = density + line_density(
+                frequency, line, resolution_hz=resolution_hz
+            )
         return density

@@ -19,6 +19,9 @@ from dq.segments import seconds_text
 #: looked at, and how often each picked a wrong family.
 LABELLERS = {"analyst-1": (0.6, 0.04), "analyst-2": (0.4, 0.08)}
 
+#: First words of a site's README.txt, by which an older site is recognised.
+INVENTED = b"Orrin Vale is an invented observatory."
+
 #: Nobody labels what hardly shows.
 _LABEL_SNR = 12.0
 
@@ -211,7 +214,7 @@ def readme_text(night: Night) -> str:
     """Write ``README.txt``."""
     settings = night.settings
     return (
-        "Orrin Vale is an invented observatory. Everything in this folder was computed "
+        f"{INVENTED.decode()} Everything in this folder was computed "
         f"from seed {settings.seed};\nno instrument, place or person stands behind it."
         "\n\n"
         f"GPS {settings.start} to {settings.start + settings.duration_s}, "

@@ -33,6 +33,9 @@ _ERROR_HIGH_PASS_HZ = 25.0
 #: What the unplugged sensor's converter says for ever.
 DEAD_VALUE = 1873
 
+#: Rails of a 16-bit converter.
+COUNTS = (-32768, 32767)
+
 #: Fewest samples at the rail that count as a planted saturation.
 MIN_PLATEAU = 3
 
@@ -90,7 +93,7 @@ def record_strain(night: Night) -> tuple[np.ndarray, np.ndarray, list[Fault]]:
     add_contributions(strain, sample_rate=rate, items=items)
     error = _record_error(night, strain)
     np.clip(strain, -settings.rail, settings.rail, out=strain)
-    saturations = plateaus(strain, rail=settings.rail)
+    saturations = plateaus(strain, low=-settings.rail, high=settings.rail)
     if night.strain_nan is not None:
         strain[night.strain_nan.first : night.strain_nan.end] = np.nan
     return strain, error, saturations
@@ -113,14 +116,16 @@ def _record_error(night: Night, strain: np.ndarray) -> np.ndarray:
     return noise
 
 
-def plateaus(values: np.ndarray, *, rail: float) -> list[Fault]:
-    """Find the runs of at least ``MIN_PLATEAU`` samples at either rail."""
+def plateaus(
+    values: np.ndarray, *, low: float, high: float, channel: str = STRAIN
+) -> list[Fault]:
+    """Find the runs of at least ``MIN_PLATEAU`` samples at either rail, in order."""
     found = []
-    for level in (-rail, rail):
+    for level in (low, high):
         edges = np.flatnonzero(np.diff(values == level, prepend=False, append=False))
         for first, end in zip(edges[::2].tolist(), edges[1::2].tolist(), strict=True):
             if end - first >= MIN_PLATEAU:
-                found.append(Fault(STRAIN, "saturation", first, end))
+                found.append(Fault(channel, "saturation", first, end))
     return sorted(found, key=lambda f: f.first)
 
 
@@ -146,7 +151,7 @@ def record_auxiliary(night: Night, spec: ChannelSpec) -> np.ndarray:
     items = night.contributions.get(spec.name, [])
     add_contributions(values, sample_rate=spec.rate, items=items)
     if spec.dtype == "int16":
-        return np.clip(np.rint(values), -32768, 32767).astype(np.int16)
+        return np.clip(np.rint(values), *COUNTS).astype(np.int16)
     fault = night.auxiliary_nan
     if fault is not None and fault.channel == spec.name:
         values[fault.first : fault.end] = np.nan

@@ -54,9 +54,9 @@ class Coupling:
 
 
 FAMILY_RATES: tuple[FamilyRate, ...] = (
-    FamilyRate("scattered_light", 6, 25.0, 120.0),
-    FamilyRate("beat_note", 42, 14.0),
-    FamilyRate("mains_burst", 34, 12.0),
+    FamilyRate("scattered_light", 10, 25.0, 120.0),
+    FamilyRate("beat_note", 42, 20.0),
+    FamilyRate("mains_burst", 34, 14.0),
     FamilyRate("impact", 46, 9.0),
     FamilyRate("ground_motion", 26, 9.0),
     FamilyRate("acoustic", 40, 14.0),

@@ -9,10 +9,12 @@ from pathlib import Path
 
 import h5py
 
-from dq.errors import OutputError
+from dq.errors import InputError, OutputError
 from dq.observatory import listing
 from dq.observatory.channels import FILE_SHARE, UNSAFE, ChannelSpec
 from dq.observatory.recording import (
+    COUNTS,
+    plateaus,
     record_auxiliary,
     record_strain,
     write_channel,
@@ -38,7 +40,8 @@ def make_site(
     Parameters
     ----------
     directory : str or Path
-        Created when absent; files of the same names are replaced.
+        Created when absent. An older invented site is replaced; a folder that holds
+        anything else is refused.
     seed, start, duration_s : int, optional
         Random seed, GPS second of the first sample, length in s.
     settings : SiteSettings, optional
@@ -55,7 +58,7 @@ def make_site(
     Raises
     ------
     InputError
-        A setting is out of its bounds.
+        A setting is out of its bounds, or the folder holds something else.
     OutputError
         The folder cannot be written.
     """
@@ -73,15 +76,28 @@ def make_site(
         ) from error
 
 
-def _make(directory: Path, settings: SiteSettings, progress: Progress) -> Path:
-    raw, truth = directory / "raw", directory / "truth"
-    config = directory / "dq.toml"
-    config.unlink(missing_ok=True)
-    for folder in (raw, truth):
+def _clear(directory: Path) -> None:
+    """Make the folder ready for a new site, without losing anybody's data."""
+    readme = directory / "README.txt"
+    if directory.exists() and any(directory.iterdir()):
+        ours = readme.is_file() and readme.read_bytes().startswith(listing.INVENTED)
+        if not ours:
+            raise InputError(
+                f"folder {str(directory)!r} holds something that is no invented site; "
+                "choose an empty folder"
+            )
+    (directory / "dq.toml").unlink(missing_ok=True)
+    for folder in (directory / "raw", directory / "truth"):
         folder.mkdir(parents=True, exist_ok=True)
-    for old in raw.glob("*.h5"):
+    for old in (directory / "raw").glob("*.h5"):
         old.unlink()
+
+
+def _make(directory: Path, settings: SiteSettings, progress: Progress) -> Path:
+    raw, config = directory / "raw", directory / "dq.toml"
+    _clear(directory)
     night = plan_night(settings)
+    (directory / "README.txt").write_text(listing.readme_text(night), encoding="utf-8")
     total = len(night.channels) + 2
     progress(1, total, "plan")
     strain, error, saturations = record_strain(night)
@@ -95,6 +111,11 @@ def _make(directory: Path, settings: SiteSettings, progress: Progress) -> Path:
             for spec in specs:
                 values = error if spec.name == UNSAFE else record_auxiliary(night, spec)
                 write_channel(files, night, spec, values)
+                if spec.dtype == "int16":
+                    low, high = COUNTS
+                    saturations += plateaus(
+                        values, low=low, high=high, channel=spec.name
+                    )
                 done += 1
                 progress(done, total, spec.name)
     texts = {
@@ -102,7 +123,6 @@ def _make(directory: Path, settings: SiteSettings, progress: Progress) -> Path:
         "ready.txt": listing.ready_list(night),
         "injections.csv": listing.injection_list(night),
         "labels.csv": listing.label_list(night),
-        "README.txt": listing.readme_text(night),
         "truth/transients.csv": listing.transient_truth(night),
         "truth/own_glitches.csv": listing.own_truth(night),
         "truth/couplings.csv": listing.coupling_truth(night),

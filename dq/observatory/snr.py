@@ -111,8 +111,8 @@ class NoiseModel:
         samples = max(len(u), 2 * self.sample_rate)
         energy = np.abs(scipy.fft.fft(u, samples)[1 : samples // 2]) ** 2
         f = np.arange(1, samples // 2) * (self.sample_rate / samples)
-        edges = np.geomspace(self.f_low_hz, 0.5 * self.sample_rate, 257)
+        edges = np.geomspace(self.f_low_hz, 0.5 * self.sample_rate, 513)
         centres = np.sqrt(edges[1:] * edges[:-1])
         # bins narrower than the Fourier step would show its comb, hence the smoothing
         grid = np.interp(centres, f, energy) * centres
-        return float(centres[np.argmax(gaussian_filter1d(grid, 4.0))])
+        return float(centres[np.argmax(gaussian_filter1d(grid, 8.0))])
