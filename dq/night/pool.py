@@ -148,14 +148,24 @@ def make_pool(jobs: int) -> Iterator[Executor]:
 def _uninterrupted() -> Iterator[None]:
     """Hold Ctrl-C back while a worker may be starting.
 
-    The worker inherits the block: Ctrl-C reaches the whole process group, and what
-    ends is for the parent to decide.
+    The worker inherits the block for good: Ctrl-C reaches the whole process group, and
+    what ends is for the parent to decide. In the parent another thread may still take
+    the signal, so its handler waits too.
     """
+    interrupts: list[int] = []
+    in_main = threading.current_thread() is threading.main_thread()
+    handler = signal.getsignal(signal.SIGINT)
+    if in_main:
+        signal.signal(signal.SIGINT, lambda number, frame: interrupts.append(number))
     before = signal.pthread_sigmask(signal.SIG_BLOCK, {signal.SIGINT})
     try:
         yield
     finally:
         signal.pthread_sigmask(signal.SIG_SETMASK, before)
+        if in_main:
+            signal.signal(signal.SIGINT, handler)
+    if interrupts:
+        raise KeyboardInterrupt
 
 
 def _begin_worker() -> None:
