@@ -14,7 +14,7 @@ from dq.cli.verb import Verb
     "find",
     cls=Verb,
     example="dq find night-demo/site/dq.toml OV-STRAIN "
-    "--start 1420000000 --end 1420000600",
+    "--start 1420000100 --end 1420000700",
     short_help="Transients of one channel, as CSV on stdout.",
 )
 @click.argument("config")

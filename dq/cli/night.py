@@ -13,7 +13,8 @@ from dq.cli.verb import Verb
 @click.command(
     "night",
     cls=Verb,
-    example="dq night dq.toml --start 1420000000 --end 1420003600 --out night",
+    example="dq night night-demo/site/dq.toml "
+    "--start 1420000037 --end 1420003637 --out night",
     short_help="The nightly batch: every stage, resumable.",
 )
 @click.argument("config")

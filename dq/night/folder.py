@@ -12,6 +12,7 @@ import fcntl
 import json
 import logging
 import os
+import re
 import time
 from pathlib import Path
 from types import TracebackType
@@ -26,6 +27,9 @@ LOG = "run.log"
 
 #: What a night that was killed early may have left.
 _EARLY = {LOCK, STATE, LOG, MANIFEST}
+
+#: A file that was being written when a run was killed, to be renamed when whole.
+_HALF = re.compile(r"\..+\.(csv|h5|html|json|txt)\.\w{8}")
 
 #: Error numbers of a full disk or a file system that went away.
 LOST = {errno.ENOSPC, errno.EDQUOT, errno.ESTALE, errno.ENOTCONN, errno.EROFS}
@@ -145,6 +149,10 @@ class NightFolder:
                 f"another run works in {str(self.path)!r}; wait for it to end or "
                 "choose another --out"
             ) from error
+        for folder in (self.path, self.path / STATE, self.path / "segments"):
+            for half in folder.glob(".*"):
+                if _HALF.fullmatch(half.name):
+                    half.unlink()
 
 
 class _RunLog(logging.Handler):
@@ -197,10 +205,12 @@ def check_folder(path: Path) -> None:
         raise InputError(f"cannot read {str(path)!r}: {error.strerror}") from error
     if MANIFEST in names:
         read_manifest(path)
-    elif names - _EARLY:
+        return
+    strange = sorted(n for n in names - _EARLY if not _HALF.fullmatch(n))
+    if strange:
         raise InputError(
-            f"{str(path)!r} holds {sorted(names - _EARLY)[0]!r} and no night; choose "
-            "an empty or new folder"
+            f"{str(path)!r} holds {strange[0]!r} and no night; choose an empty or new "
+            "folder"
         )
 
 

@@ -122,3 +122,12 @@ def test_manifest_round_trip(tmp_path):
     assert read_manifest(tmp_path)["state"] == "running"
     with pytest.raises(InputError, match="holds no manifest"):
         read_manifest(tmp_path / "elsewhere")
+
+
+def test_half_written_files_of_a_killed_run_are_removed(tmp_path):
+    (tmp_path / "state").mkdir()
+    half = [tmp_path / ".manifest.json.ab12_x9z", tmp_path / "state" / ".A.h5.abcd1234"]
+    for path in half:
+        path.write_text("half")
+    with NightFolder(tmp_path):
+        assert not any(path.exists() for path in half)
