@@ -28,7 +28,14 @@ from dq.night.stream import Piece, SampleWindow
 from dq.segments import Segments
 from dq.tables import TRANSIENTS, conform
 from dq.tiles import TilePlan, band_weights, plan_tiles, tile_runs
-from dq.transients import Marks, label_marks, place_runs, split_finished, summarise
+from dq.transients import (
+    LINK,
+    Marks,
+    label_marks,
+    place_runs,
+    split_finished,
+    summarise,
+)
 
 _NS = 1_000_000_000
 
@@ -308,7 +315,7 @@ class _ChannelRun:
     def _collect(self, marks: Marks, start_ns: int, *, last: bool) -> None:
         labels = label_marks(marks)
         batch_s = self.plan.batch_ns / _NS
-        reach = self.plan.tiles.longest_half_extent_s
+        reach = 2.0 * LINK * self.plan.tiles.longest_half_extent_s
         finished, pending = split_finished(marks, labels, batch_s - reach)
         if last or np.count_nonzero(pending) > MAX_PENDING:
             self.cut |= not last

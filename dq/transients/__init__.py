@@ -1,6 +1,12 @@
 """Transients: tiles above threshold, placed in time and gathered into clusters."""
 
-from dq.transients.cluster import Marks, label_marks, split_finished, summarise
+from dq.transients.cluster import (
+    LINK,
+    Marks,
+    label_marks,
+    split_finished,
+    summarise,
+)
 from dq.transients.place import place_runs
 
-__all__ = ["Marks", "label_marks", "place_runs", "split_finished", "summarise"]
+__all__ = ["LINK", "Marks", "label_marks", "place_runs", "split_finished", "summarise"]

@@ -4,10 +4,12 @@ A tile stands for the rectangle of unit area around its centre,
 
     2 sqrt(pi) sigma_t  by  2 sqrt(pi) sigma_f        (sigma_t sigma_f = 1 / 4 pi),
 
-its noise-equivalent duration and bandwidth. Tiles whose rectangles overlap in time and
-in frequency belong together; so do clusters that happen at the same time (their common
-time is at least half of their united time), such as the teeth of a comb. What a long
-low note and a short click share is less than that, and they stay two transients.
+its noise-equivalent duration and bandwidth. Tiles whose rectangles, stretched by
+``LINK``, overlap in time and in frequency belong together: a sweep or a ringing note
+near threshold leaves gaps between the tiles that noise has lifted above it. So do
+clusters that happen at the same time (their common time is at least half of their
+united time), such as the teeth of a comb. What a long low note and a short click share
+is less than that, and they stay two transients.
 """
 
 from __future__ import annotations
@@ -18,6 +20,11 @@ import numpy as np
 
 #: Half-extents of a tile in its standard deviations.
 HALF_EXTENT = np.sqrt(np.pi)
+
+#: Stretch of the rectangles when neighbours are sought. At 1 the beat notes of the
+#: invented site fall into 2.6 pieces each, at 2 into 1.8 (measured; the middle of a note lies
+#: below the band, so two are honest); noise tiles are seconds apart and do not chain.
+LINK = 2.0
 
 #: Pairs compared at a time: bounds memory at 8 bytes x a few columns per pair.
 _PAIR_CHUNK = 2_000_000
@@ -46,6 +53,8 @@ class Marks:
         Effective one-sided noise density in that tile, unit^2 per Hz.
     count : ndarray of int
         Tiles in the run.
+    reach_s, reach_hz : ndarray of float
+        How far beyond its extent a mark seeks neighbours.
     """
 
     start: np.ndarray
@@ -58,6 +67,8 @@ class Marks:
     energy: np.ndarray
     noise: np.ndarray
     count: np.ndarray
+    reach_s: np.ndarray
+    reach_hz: np.ndarray
 
     def __len__(self) -> int:
         return len(self.start)
@@ -135,16 +146,17 @@ def label_marks(marks: Marks) -> np.ndarray:
     """
     if len(marks) == 0:
         return np.zeros(0, dtype=np.int64)
-    order = np.argsort(marks.start, kind="stable")
-    start, end = marks.start[order], marks.end[order]
-    low, high = marks.low[order], marks.high[order]
+    order = np.argsort(marks.start - marks.reach_s, kind="stable")
+    placed = marks.take(order)
+    start, end = placed.start - placed.reach_s, placed.end + placed.reach_s
+    low, high = placed.low - placed.reach_hz, placed.high + placed.reach_hz
     lefts, rights = [], []
     for left, right in overlap_pairs(start, end):
         touch = (low[left] < high[right]) & (low[right] < high[left])
         lefts.append(left[touch])
         rights.append(right[touch])
     labels = _connected(len(marks), np.concatenate(lefts), np.concatenate(rights))
-    labels = _join_simultaneous(start, end, labels)
+    labels = _join_simultaneous(placed.start, placed.end, labels)
     back = np.empty(len(order), dtype=np.int64)
     back[order] = labels
     return back

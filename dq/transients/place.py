@@ -6,7 +6,7 @@ import numpy as np
 
 from dq.tiles.plan import TilePlan
 from dq.tiles.transform import TileRuns
-from dq.transients.cluster import HALF_EXTENT, Marks
+from dq.transients.cluster import HALF_EXTENT, LINK, Marks
 
 
 def peak_shift(before: np.ndarray, peak: np.ndarray, after: np.ndarray) -> np.ndarray:
@@ -77,4 +77,6 @@ def place_runs(
         energy=runs.energy,
         noise=noise[item, row],
         count=runs.last - runs.first + 1,
+        reach_s=(LINK - 1.0) * half_t,
+        reach_hz=(LINK - 1.0) * half_f,
     )

@@ -1,5 +1,7 @@
 """Clusters of tiles: what belongs together, what does not, and the slow twin."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -23,6 +25,8 @@ def marks(rows):
         energy=energy,
         noise=np.full(len(a), 2.0),
         count=np.ones(len(a), dtype=int),
+        reach_s=np.zeros(len(a)),
+        reach_hz=np.zeros(len(a)),
     )
 
 
@@ -128,6 +132,15 @@ def test_a_click_inside_a_long_low_note_stays_its_own():
 def test_abutting_tiles_do_not_overlap():
     m = marks([(0, 1, 20, 30, 90), (1, 2, 20, 30, 40)])
     assert len(set(label_marks(m))) == 2
+
+
+def test_reach_joins_what_nearly_overlaps():
+    m = marks([(0, 1, 20, 30, 90), (1.3, 2, 20, 30, 40)])
+    joined = replace(m, reach_s=np.full(2, 0.2))
+    assert len(set(label_marks(m))) == 2
+    assert len(set(label_marks(joined))) == 1
+    # neighbours are sought further out, but the transient does not grow by it
+    assert summarise(joined, label_marks(joined))["end"][0] == 2
 
 
 def test_summary_of_one_cluster():
