@@ -1,5 +1,6 @@
 """The night: what it writes, resumes, leaves out, refuses."""
 
+import csv
 import json
 from concurrent.futures.process import BrokenProcessPool
 
@@ -302,3 +303,25 @@ def test_files_of_another_day_change_nothing(small_site, tmp_path, here, count):
         data.attrs["gps_start"], data.attrs["sample_rate"] = SITE_START + 86400, 512
     assert night(config, out).nothing_to_do
     assert count == []
+
+
+def rows_between(out, low, high):
+    with (out / "strain_transients.csv").open() as file:
+        rows = list(csv.DictReader(file))
+    judged = ("witness", "veto")  # these may depend on the whole of a night
+    return [
+        {k: v for k, v in row.items() if k not in judged}
+        for row in rows
+        if SITE_START + low <= float(row["gps_time"]) < SITE_START + high
+    ]
+
+
+def test_overlapping_nights_agree_on_the_overlap(small_site, tmp_path, here):
+    config = small_site(dead=False)
+    early = {"start": SITE_START, "end": SITE_START + 170}
+    late = {"start": SITE_START + 90, "end": SITE_START + 250}
+    night(config, tmp_path / "early", **early)
+    night(config, tmp_path / "late", **late)
+    shared = rows_between(tmp_path / "early", 92, 168)
+    assert len(shared) >= 4
+    assert shared == rows_between(tmp_path / "late", 92, 168)
