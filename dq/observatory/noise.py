@@ -58,7 +58,8 @@ def coloured_noise(
     -----
     Each piece is the inverse Fourier transform of independent normal bins of variance
     S f_s n / 2. Neighbouring pieces are independent; over the fade they are weighted by
-    cosine and sine, whose squares add up to 1, so the variance stays even.
+    sin and cos of (pi/2) sin^2(pi u / 2), whose squares add up to 1, so the variance
+    stays even, and whose slope vanishes at both ends, so steep noise gets no kink.
     """
     fade = FADE_S * sample_rate
     piece = scipy.fft.next_fast_len(min(PIECE_S * sample_rate, samples + fade), True)
@@ -68,7 +69,8 @@ def coloured_noise(
         raise InputError("noise density must be finite and not negative everywhere")
     scale = np.sqrt(power * (sample_rate * piece / 4.0)).astype(dtype)
     scale[0] = 0.0
-    ramp = np.sin(0.5 * np.pi * (np.arange(fade) + 0.5) / fade).astype(dtype)
+    turn = 0.5 * np.pi * (np.arange(fade) + 0.5) / fade
+    ramp = np.sin(0.5 * np.pi * np.sin(turn) ** 2).astype(dtype)
     out = np.zeros(samples, dtype=dtype)
     for first in range(0, samples, piece - fade):
         part = _piece(scale, piece, rng)

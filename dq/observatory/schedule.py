@@ -174,23 +174,22 @@ def _plan_faults(night: Night, calendar: Calendar) -> None:
     def stretch(channel, kind, at, length_s, rate):
         if length_s <= 0:
             return None
-        # eighths of a second are whole samples at every rate of the site
         first = round(8 * at * seconds) * rate // 8
         fault = Fault(channel, kind, first, first + round(length_s * rate))
         if channel == STRAIN:
             calendar.block(fault.first / rate - 1.0, fault.end / rate + 1.0)
         return fault
 
-    night.gap = stretch(STRAIN, "gap", 0.5621, settings.gap_s, rate)
-    length = settings.strain_nan_s
+    night.gap = stretch(STRAIN, "gap", 0.5621, settings.fault_length("gap_s"), rate)
+    length = settings.fault_length("strain_nan_s")
     night.strain_nan = stretch(STRAIN, "not_finite", 0.3137, length, rate)
     spec = next(c for c in night.channels if c.name == NOT_FINITE)
-    length = settings.auxiliary_nan_s
+    length = settings.fault_length("auxiliary_nan_s")
     night.auxiliary_nan = stretch(NOT_FINITE, "not_finite", 0.7262, length, spec.rate)
     pause = round(0.45 * seconds)
     night.ready_s = [(0.0, float(seconds))]
     if settings.not_ready_s > 0:
-        end = pause + settings.not_ready_s
+        end = pause + max(1.0, int(settings.fault_length("not_ready_s")))
         night.ready_s = [(0.0, float(pause)), (end, float(seconds))]
 
 

@@ -105,7 +105,7 @@ class SiteSettings:
         Rounded to a whole number for the night.
     gap_s, strain_nan_s, auxiliary_nan_s, not_ready_s : float
         Lengths of the recording gap, the not-finite stretches, and the pause of the
-        ready time; 0 leaves each out.
+        ready time; 0 leaves each out. None takes more than a twentieth of the night.
     rail : float
         Strain at which the converter saturates.
     spare_channels : int
@@ -160,7 +160,15 @@ class SiteSettings:
         _within("spare_channels", self.spare_channels, 0, 10_000)
         _within("strain_file_s", self.strain_file_s, 16, 86400)
         for name in ("gap_s", "strain_nan_s", "auxiliary_nan_s", "not_ready_s"):
-            _within(name, getattr(self, name), 0.0, 0.05 * self.duration_s)
+            _within(name, getattr(self, name), 0.0, 3600.0)
+
+    def fault_length(self, name: str) -> float:
+        """Give the length in s that a fault of the settings has in this night.
+
+        Whole eighths of a second, which are whole samples at every rate of the site.
+        """
+        wanted = min(getattr(self, name), self.duration_s / 20)
+        return int(8 * wanted) / 8
 
     def with_rates(self, **per_hour: float) -> SiteSettings:
         """Give the settings with other rates, as in ``with_rates(impact=0)``.

@@ -108,7 +108,7 @@ class NoiseModel:
         )
 
     def _peak_frequency(self, u: np.ndarray) -> float:
-        samples = max(len(u), 2 * self.sample_rate)
+        samples = scipy.fft.next_fast_len(max(len(u), 2 * self.sample_rate))
         energy = np.abs(scipy.fft.fft(u, samples)[1 : samples // 2]) ** 2
         f = np.arange(1, samples // 2) * (self.sample_rate / samples)
         edges = np.geomspace(self.f_low_hz, 0.5 * self.sample_rate, 513)
