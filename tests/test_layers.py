@@ -133,7 +133,7 @@ def breaches(path: Path, tree: ast.AST) -> list[str]:
         where = f"{path.relative_to(PACKAGE.parent)}:{line}"
         if top == "dq":
             target = rest.partition(".")[0]
-            if target in ("__version__", part):
+            if target in ("", "__version__", part):
                 continue
             below = GROUND[: GROUND.index(part)] if part in GROUND else GROUND
             if target not in below and target not in MAY_IMPORT[part]:

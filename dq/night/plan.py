@@ -9,9 +9,10 @@ from pathlib import Path
 
 from dq.config import digest
 from dq.errors import DqError, NoDataError
+from dq.night.code import ENGINE, code_digest
 from dq.night.inputs import Inputs, check_strain_time
 from dq.night.pool import Task
-from dq.night.state import STATE_SCHEMA, state_path
+from dq.night.state import state_path
 from dq.segments import Segments
 from dq.store import Channel
 
@@ -101,7 +102,12 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
     plan.tasks.sort(key=lambda t: (t.channel != strain.name, -t.weight, t.channel))
     keys = {t.channel: t.key for t in plan.tasks}
     plan.request = _sha256(
-        digest(inputs.config), inputs.texts, [start_ns, end_ns], keys, plan.left_out
+        code_digest(),
+        digest(inputs.config),
+        inputs.texts,
+        [start_ns, end_ns],
+        keys,
+        plan.left_out,
     )
     contents = {
         t.channel: inputs.store.content_id(t.channel, plan.reach) for t in plan.tasks
@@ -134,13 +140,10 @@ def _task(plan: NightPlan, row: Channel, state: Path) -> Task:
 
 def _key(plan: NightPlan, row: Channel) -> str:
     """Give the digest of everything that a channel's result depends on."""
-    from dq import __version__
-
     inputs, config = plan.inputs, plan.inputs.config
     ready = inputs.wanted & plan.reach
     return _sha256(
-        STATE_SCHEMA,
-        __version__,
+        code_digest(*ENGINE),
         row.name,
         digest(config.conditioning, config.tiles, config.transients),
         [row.f_low_hz, row.f_high_hz],

@@ -71,3 +71,12 @@ def test_state_names_are_safe_and_unique(tmp_path):
         assert len(path.name) < 128
         assert "/" not in path.name
         assert ":" not in path.name
+
+
+def test_a_state_belongs_to_the_code_that_made_it():
+    from dq.night.code import ENGINE, code_digest
+
+    engine = code_digest(*ENGINE)
+    assert engine == code_digest(*ENGINE)
+    assert engine != code_digest()
+    assert engine != code_digest(*ENGINE[1:])
