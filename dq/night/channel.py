@@ -39,9 +39,11 @@ from dq.transients import (
 
 _NS = 1_000_000_000
 
-#: Blocks that go through the tiling together; the FFT library works on 4 to 8 of them
-#: side by side (measured: four times the speed of one at a time).
-BATCH_BLOCKS = 8
+#: Blocks that go through the tiling together: the FFT library works on several side by
+#: side (measured: 8 run four times as fast as one at a time), and slow channels share
+#: the cost of a row's calls among more. Samples per batch, and bounds on the blocks.
+BATCH_SAMPLES = 2**21
+BATCH_BLOCKS = (8, 32)
 
 #: Longest settling time of tile and filter at the ends of data, s. Longer tiles are
 #: left out of the plan: they would cost more unjudged time than they find (own choice).
@@ -97,6 +99,7 @@ class BlockPlan:
 
     rate: float
     block_ns: int
+    batch: int
     pad_ns: int
     segment: int
     half_length: int
@@ -107,7 +110,7 @@ class BlockPlan:
     @property
     def batch_ns(self) -> int:
         """Length of a batch of blocks."""
-        return BATCH_BLOCKS * self.block_ns
+        return self.batch * self.block_ns
 
 
 def plan_blocks(rate, config: Config, f_low: float, f_high: float | None) -> BlockPlan:
@@ -147,6 +150,7 @@ def plan_blocks(rate, config: Config, f_low: float, f_high: float | None) -> Blo
     return BlockPlan(
         rate=fs,
         block_ns=round(tiles.block_s * _NS),
+        batch=_batch_blocks(tiles.block_s * fs),
         pad_ns=round(pad * _NS),
         segment=segment,
         half_length=half,
@@ -154,6 +158,12 @@ def plan_blocks(rate, config: Config, f_low: float, f_high: float | None) -> Blo
         weights=band_weights(plan, frequency),
         difference=difference_response(frequency, fs),
     )
+
+
+def _batch_blocks(samples: float) -> int:
+    """Give how many blocks of ``samples`` go together, a power of two."""
+    blocks = 2 ** round(math.log2(BATCH_SAMPLES / samples))
+    return int(min(max(blocks, BATCH_BLOCKS[0]), BATCH_BLOCKS[1]))
 
 
 @dataclass
@@ -243,11 +253,11 @@ class _ChannelRun:
         self.finite += [(p.start_ns, p.end_ns) for p in pieces]
         self.frames.update(pieces, start_ns, end_ns, bad)
         items = []
-        for block in range(BATCH_BLOCKS):
+        for block in range(plan.batch):
             items += self._items(start_ns + block * plan.block_ns)
         parts = [self.pending]
-        for first in range(0, len(items), BATCH_BLOCKS):
-            parts.append(self._marks(items[first : first + BATCH_BLOCKS], start_ns))
+        for first in range(0, len(items), plan.batch):
+            parts.append(self._marks(items[first : first + plan.batch], start_ns))
         self._collect(Marks.join(parts), start_ns, last=last)
 
     def _items(self, block_ns: int) -> list[_Item]:

@@ -14,6 +14,28 @@ CHUNK = 256
 
 
 @njit(cache=True, fastmath=True, nogil=True)
+def apply_window(spectra, first, window, out):
+    """Put a row's part of each spectrum under its window, followed by zeros.
+
+    Parameters
+    ----------
+    spectra : ndarray of float32, shape (n_items, 2 * n_bins)
+        Real and imaginary parts in turn.
+    first : int
+        First bin of the window.
+    window : ndarray of float32, shape (width,)
+    out : ndarray of float32, shape (n_items, 2 * n_tiles)
+    """
+    width = window.shape[0]
+    for item in range(spectra.shape[0]):
+        source, target = spectra[item, 2 * first :], out[item]
+        for k in range(width):
+            target[2 * k] = source[2 * k] * window[k]
+            target[2 * k + 1] = source[2 * k + 1] * window[k]
+        target[2 * width :] = 0.0
+
+
+@njit(cache=True, fastmath=True, nogil=True)
 def _largest_energy(x: np.ndarray, start: int, stop: int) -> np.float32:
     """Largest squared modulus in ``[start, stop)``; reassociation is harmless here."""
     largest = np.float32(0.0)

@@ -16,7 +16,7 @@ from dataclasses import dataclass
 import numpy as np
 import scipy.fft
 
-from dq.tiles.kernels import find_runs
+from dq.tiles.kernels import apply_window, find_runs
 from dq.tiles.plan import TilePlan
 
 #: Complex64 coefficients that one row may hold at a time (32 MiB): longer batches of
@@ -55,7 +55,9 @@ class TileRuns:
         return len(self.item)
 
 
-def row_coefficients(spectra: np.ndarray, plan: TilePlan, row: int) -> np.ndarray:
+def row_coefficients(
+    spectra: np.ndarray, plan: TilePlan, row: int, work: np.ndarray | None = None
+) -> np.ndarray:
     """Compute all tiles of one row.
 
     Parameters
@@ -64,6 +66,8 @@ def row_coefficients(spectra: np.ndarray, plan: TilePlan, row: int) -> np.ndarra
         Whitened spectra; bins have mean square 1 in noise.
     plan : TilePlan
     row : int
+    work : ndarray of complex64, shape (at least n_items * n_tiles,), optional
+        Memory to work in; the result is a view of it.
 
     Returns
     -------
@@ -71,11 +75,12 @@ def row_coefficients(spectra: np.ndarray, plan: TilePlan, row: int) -> np.ndarra
         Coefficients at times ``k * length_s / n_tiles`` after the first sample; their
         phases turn with the tile (only moduli are meant to be used).
     """
-    window, first = plan.windows[row], plan.first_bin[row]
-    width, n_tiles = len(window), plan.tiles[row]
-    buffer = np.empty((len(spectra), n_tiles), dtype=np.complex64)
-    np.multiply(spectra[:, first : first + width], window, out=buffer[:, :width])
-    buffer[:, width:] = 0
+    shape = (len(spectra), int(plan.tiles[row]))
+    if work is None:
+        work = np.empty(shape[0] * shape[1], dtype=np.complex64)
+    buffer = work[: shape[0] * shape[1]].reshape(shape)
+    parts, out = spectra.view(np.float32), buffer.view(np.float32)
+    apply_window(parts, plan.first_bin[row], plan.windows[row], out)
     return scipy.fft.ifft(buffer, axis=1, norm="forward", overwrite_x=True, workers=1)
 
 
@@ -106,18 +111,18 @@ def tile_runs(
     TileRuns
     """
     places, energies, rows = [], [], []
-    for row in range(len(plan.q)):
-        n_tiles = int(plan.tiles[row])
-        spacing = plan.length_s / n_tiles
-        low = np.ceil(np.asarray(start_s) / spacing - 1e-9).astype(np.int64)
-        high = np.ceil(np.asarray(end_s) / spacing - 1e-9).astype(np.int64)
-        low, high = np.clip(low, 0, n_tiles), np.clip(high, 0, n_tiles)
-        bound = (threshold * level[:, row]).astype(np.float32)
-        chunk = max(_ROW_LIMIT // n_tiles, 1)
+    lows, highs = _tile_range(plan, start_s), _tile_range(plan, end_s)
+    bounds = (threshold * level.T).astype(np.float32)
+    chunks = np.clip(_ROW_LIMIT // plan.tiles, 1, len(spectra))
+    # fresh memory for every row would cost more in page faults than the transform
+    work = np.empty(int(np.max(chunks * plan.tiles)), dtype=np.complex64)
+    for row, chunk in enumerate(chunks):
         for item in range(0, len(spectra), chunk):
             part = slice(item, item + chunk)
-            x = row_coefficients(spectra[part], plan, row).view(np.float32)
-            place, energy = _runs_of(x, low[part], high[part], bound[part])
+            x = row_coefficients(spectra[part], plan, row, work).view(np.float32)
+            place, energy = _runs_of(
+                x, lows[row, part], highs[row, part], bounds[row, part]
+            )
             if len(place):
                 place[:, 0] += item
                 places.append(place)
@@ -130,6 +135,13 @@ def tile_runs(
     return TileRuns(
         place[:, 0], np.concatenate(rows), *place[:, 1:].T, *energy.T.astype(float)
     )
+
+
+def _tile_range(plan: TilePlan, seconds) -> np.ndarray:
+    """Give each row's first tile at or after a time, shape (n_rows, n_items)."""
+    spacing = plan.length_s / plan.tiles[:, None]
+    first = np.ceil(np.asarray(seconds)[None, :] / spacing - 1e-9).astype(np.int64)
+    return np.clip(first, 0, plan.tiles[:, None])
 
 
 def _runs_of(x, low, high, bound) -> tuple[np.ndarray, np.ndarray]:

@@ -22,7 +22,7 @@ import numpy as np
 HALF_EXTENT = np.sqrt(np.pi)
 
 #: Stretch of the rectangles when neighbours are sought. At 1 the beat notes of the
-#: invented site fall into 2.6 pieces each, at 2 into 1.8 (measured; the middle of a note lies
+#: invented site fall into 2.6 pieces each, at 2 into 1.8 (measured; their middle lies
 #: below the band, so two are honest); noise tiles are seconds apart and do not chain.
 LINK = 2.0
 
