@@ -35,8 +35,12 @@ strain = "BW.UH1.SHZ"
 files = ["raw/*.h5"]
 channels = "channels.csv"
 
+# Four minutes hold few coincidences, so few trials are made, and earthquakes last for
+# seconds at stations that lie kilometres apart.
 [witnesses]
-half_windows_s = [0.5, 1.0, 2.0]    # stations lie kilometres apart
+snr_thresholds = [7.0, 10.0]
+half_windows_s = [1.0, 2.0, 4.0]
+false_alarm_probability = 0.05
 
 [vetoes]
 max_dead_time = 0.4                 # four earthquakes in four minutes
