@@ -164,7 +164,7 @@ AUXILIARY: tuple[ChannelSpec, ...] = (
         "photocurrent",
         "mA",
         "photodiode behind the tube baffle",
-        SensorNoise(1e-4, 12.0, 2.0),
+        SensorNoise(1e-4, 60.0, 4.0, flat_hz=8.0),
         10.0,
         own=OwnGlitches("poisson", 14),
     ),

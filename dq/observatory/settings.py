@@ -66,7 +66,7 @@ FAMILY_RATES: tuple[FamilyRate, ...] = (
 
 #: The first coupling of a family names its witness in the truth tables.
 COUPLINGS: tuple[Coupling, ...] = (
-    Coupling("scattered_light", "OV-BAFFLE-PD", 0.0, 1.0, 1.8),
+    Coupling("scattered_light", "OV-BAFFLE-PD", 0.0, 1.0, 3.0),
     Coupling("scattered_light", "OV-BAFFLE-POS", 0.0, 1.0, None),
     Coupling("beat_note", "OV-RF-BEAT", 0.0, 0.9, 2.0),
     Coupling("mains_burst", "OV-MAINS-VOLT", 0.0, 0.95, 2.5),

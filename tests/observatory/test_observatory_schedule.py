@@ -30,7 +30,7 @@ def hour():
 
 @pytest.fixture(scope="module")
 def long_night():
-    return plan_night(SiteSettings(seed=5, duration_s=4 * 3600, own_glitch_scale=0.0))
+    return plan_night(SiteSettings(seed=5, duration_s=2 * 3600, own_glitch_scale=0.0))
 
 
 def test_an_hour_holds_some_hundred_transients_of_every_family(hour):
