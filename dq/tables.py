@@ -203,13 +203,21 @@ def conform(table: pd.DataFrame, columns: tuple[Column, ...]) -> pd.DataFrame:
         if c.kind == "time_ns":
             out[c.name] = pd.array(np.asarray(table[c.name], dtype=np.int64))
             continue
-        values = table.get(c.name, pd.NA)
-        dtype = _DTYPES[c.kind]
-        series = pd.Series(values, index=table.index)
-        if dtype == "float64":
-            series = pd.to_numeric(series, errors="coerce")
-        out[c.name] = series.astype(dtype).reset_index(drop=True)
+        out[c.name] = _typed(table.get(c.name), _DTYPES[c.kind], len(table))
     return pd.DataFrame(out, columns=names)
+
+
+def _typed(values: pd.Series | None, dtype: str, rows: int):
+    """Give a column as an array of its type; quick where the type is right already."""
+    if values is None:
+        values = pd.Series([pd.NA] * rows, dtype="object")
+    if dtype == "float64":
+        if values.dtype == np.float64:
+            return values.to_numpy(copy=True)
+        return pd.to_numeric(values, errors="coerce").astype(dtype).array
+    if dtype == "Int64" and values.dtype == np.int64:
+        return pd.array(values.to_numpy(), dtype=dtype)
+    return values.astype(dtype).array
 
 
 def format_column(values: pd.Series, column: Column) -> list[str]:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import glob
 import hashlib
 import json
+import os
 from dataclasses import astuple
 from pathlib import Path
 
@@ -44,6 +45,7 @@ class Store:
             self._by_channel.setdefault(stretch.channel, []).append(stretch)
         self._masks = masks
         self._has_mask = has_mask
+        self._stats: dict[int, os.stat_result] = {}
         self.channels = sorted(self._by_channel)
         self.problems = problems
 
@@ -80,8 +82,9 @@ class Store:
         ----------
         name : str
         span : Segments, optional
-            Only what is recorded here counts; without it, everything does. Files that
-            arrive later for other times then change nothing.
+            Only what is recorded between its first start and last end counts; without
+            it, everything does. Files that arrive later for other times then change
+            nothing.
         """
         return self._digest(name, span, with_time=True)
 
@@ -91,16 +94,22 @@ class Store:
 
     def _digest(self, name: str, span: Segments | None, *, with_time: bool) -> str:
         rows = []
+        low, high = (span.starts[0], span.ends[-1]) if span else (-(2**63), 2**63)
         for stretch in sorted(self._by_channel[name], key=astuple):
-            time = Segments.of([(stretch.start_ns, stretch.end_ns)])
-            if span is not None and not time & span:
+            if stretch.end_ns <= low or stretch.start_ns >= high:
                 continue
             path = self._paths[stretch.file]
-            status = path.stat()
+            status = self._status(stretch.file)
             row = [_relative(path, self._base), status.st_size, str(stretch.rate)]
             row += [stretch.dataset, stretch.start_ns, stretch.samples, stretch.dtype]
             rows.append([*row, status.st_mtime_ns] if with_time else row)
         return hashlib.sha256(json.dumps(rows).encode()).hexdigest()
+
+    def _status(self, file: int) -> os.stat_result:
+        # thousands of channels share a file
+        if file not in self._stats:
+            self._stats[file] = self._paths[file].stat()
+        return self._stats[file]
 
 
 def _relative(path: Path, base: Path) -> str:
