@@ -1,0 +1,254 @@
+"""The page for people, made from the folder's tables alone."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import pandas as pd
+
+from dq.gps import gps_to_utc_text
+from dq.report.night_tables import NightTables, read_night
+from dq.segments import NS, seconds_text
+from dq.writers import write_atomically
+
+PAGE = "index.html"
+
+#: Rows of a table that are shown at once; the rest folds away.
+_OPEN_ROWS = 30
+
+
+def write_page(directory: str | Path) -> Path:
+    """Write ``index.html`` from the tables of a night's folder.
+
+    Parameters
+    ----------
+    directory : str or Path
+
+    Returns
+    -------
+    Path
+
+    Raises
+    ------
+    InputError
+        The folder holds no night.
+    OutputError
+        The page cannot be written.
+    """
+    night = read_night(directory)
+    path = Path(directory) / PAGE
+    write_atomically(path, render(night))
+    return path
+
+
+def render(night: NightTables) -> str:
+    """Render the page; equal tables give equal text."""
+    from jinja2 import Environment, PackageLoader, StrictUndefined
+
+    from dq.report.figures import map_of_transients, removal_curve, snr_distribution
+
+    environment = Environment(
+        loader=PackageLoader("dq.report"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+    template = environment.get_template("night.html")
+    return template.render(
+        site=night.site,
+        strain=night.strain_name,
+        gps=(seconds_text(night.start_ns), seconds_text(night.end_ns)),
+        utc=[gps_to_utc_text(t / NS) for t in (night.start_ns, night.end_ns)],
+        version=night.manifest.get("dq_version", ""),
+        facts=facts(night),
+        sentences=sentences(night),
+        map=map_of_transients(night),
+        removal=removal_curve(night),
+        distribution=snr_distribution(night),
+        vetoes=_vetoes(night),
+        witnesses=_witnesses(night.accepted()),
+        others=_witnesses(_others(night)),
+        left_out=_left_out(night),
+        gaps=_gaps(night),
+        loudest=_loudest(night),
+        channels=_channels(night),
+        open_rows=_OPEN_ROWS,
+    )
+
+
+def percent(value, digits: int = 1) -> str:
+    """Write a fraction as percent; nothing for a missing one."""
+    return "–" if pd.isna(value) else f"{100 * float(value):.{digits}f} %"
+
+
+def span(seconds: float) -> str:
+    """Write a duration as people say it."""
+    if seconds < 120:
+        return f"{seconds:.3g} s"
+    if seconds < 7200:
+        return f"{seconds / 60:.1f} min"
+    return f"{seconds / 3600:.2f} h"
+
+
+def facts(night: NightTables) -> list[tuple[str, str, str]]:
+    """Give the figures at the head of the page: value, name, note."""
+    total = night.cost[night.cost["veto"] == "all"].iloc[0]
+    analysed = night.time("analysed").total_s
+    share = analysed / max((night.end_ns - night.start_ns) / NS, 1e-9)
+    loud = int((night.strain["snr"] >= 8).sum())
+    return [
+        (span(analysed), "analysed", f"{percent(share)} of the time asked for"),
+        (f"{len(night.strain)}", "strain transients", f"{loud} of SNR 8 or more"),
+        (percent(total["efficiency"]), "removed by vetoes", _by_chance(total)),
+        (
+            percent(total["dead_time_fraction"], 2),
+            "dead time",
+            f"{span(total['dead_time_s'])} of analysed time",
+        ),
+        (
+            f"{len(night.accepted())}",
+            "witnesses",
+            f"of {len(night.witnesses)} auxiliary channels",
+        ),
+    ]
+
+
+def _by_chance(total) -> str:
+    return f"{total['expected_by_chance']:.1f} transients expected by chance"
+
+
+def sentences(night: NightTables) -> list[str]:
+    """Say the night in plain words."""
+    out = []
+    missing, unjudged = night.time("missing"), night.time("unjudged")
+    if missing or unjudged:
+        out.append(
+            f"Of the strain, {span(missing.total_s)} are missing and "
+            f"{span(unjudged.total_s)} were recorded but not judged; that time is "
+            "neither clean nor vetoed."
+        )
+    left = night.channels[night.channels["status"] == "left_out"]
+    if len(left):
+        names = ", ".join(left["channel"].tolist()[:5])
+        more = f" and {len(left) - 5} more" if len(left) > 5 else ""
+        verb = "was" if len(left) == 1 else "were"
+        out.append(f"{names}{more} {verb} left out; the reasons stand below.")
+    untraced = night.summary.get("untraced_fraction")
+    if untraced is not None and len(night.strain):
+        out.append(
+            f"No accepted witness was active at {percent(untraced)} of the strain's "
+            "transients."
+        )
+    if not len(night.strain):
+        out.append("No transient was found above the threshold.")
+    elif not len(night.accepted()):
+        out.append("No witness was found beyond chance.")
+    return out
+
+
+def _vetoes(night: NightTables) -> list[dict]:
+    rows = []
+    for row in night.cost.itertuples():
+        rows.append(
+            {
+                "name": row.veto,
+                "category": "" if pd.isna(row.category) else int(row.category),
+                "source": _text(row.source),
+                "channel": _text(row.channel),
+                "segments": row.segments,
+                "dead": f"{row.dead_time_s:.2f}",
+                "share": percent(row.dead_time_fraction, 3),
+                "removed": row.removed,
+                "efficiency": percent(row.efficiency),
+                "loud": percent(row.efficiency_snr8),
+                "loudest": percent(row.efficiency_snr20),
+                "use": percent(row.use_fraction),
+                "chance": f"{row.expected_by_chance:.2f}",
+                "added": row.added_removed,
+                "added_dead": f"{row.added_dead_time_s:.2f}",
+            }
+        )
+    return rows
+
+
+def _text(value) -> str:
+    return "" if pd.isna(value) else str(value)
+
+
+def _others(night: NightTables) -> pd.DataFrame:
+    return night.witnesses[~night.witnesses["accepted"].fillna(False).astype(bool)]
+
+
+def _witnesses(rows: pd.DataFrame) -> list[dict]:
+    top = rows["significance"].max() if len(rows) else 1.0
+    out = []
+    for row in rows.itertuples():
+        tested = not pd.isna(row.significance)
+        out.append(
+            {
+                "channel": row.channel,
+                "settings": f"SNR ≥ {row.snr_threshold:g}, ± {row.half_window_s:g} s"
+                if tested
+                else "–",
+                "coincidences": row.coincidences if tested else "–",
+                "expected": f"{row.expected:.2f}" if tested else "–",
+                "significance": f"{row.significance:.1f}" if tested else "–",
+                "bar": 100 * row.significance / top if tested and top else 0,
+                "chance": f"{row.p_value:.2g}" if tested else "–",
+                "efficiency": percent(row.efficiency),
+                "use": percent(row.use_fraction),
+                "safety": _text(row.safety),
+                "reason": _text(row.reason),
+            }
+        )
+    return out
+
+
+def _left_out(night: NightTables) -> list[tuple[str, str]]:
+    return sorted(night.manifest.get("left_out", {}).items())
+
+
+def _gaps(night: NightTables) -> list[tuple[str, str, int, str]]:
+    """List time that was not judged or is faulty: channel, kind, pieces, length."""
+    rows = night.coverage[night.coverage["kind"] != "analysed"]
+    out = []
+    for (channel, kind), part in rows.groupby(["channel", "kind"], sort=False):
+        seconds = float((part["gps_end"] - part["gps_start"]).sum()) / NS
+        out.append((channel, str(kind).replace("_", " "), len(part), f"{seconds:.3f}"))
+    return out
+
+
+def _loudest(night: NightTables) -> list[dict]:
+    rows = night.strain.sort_values("snr", ascending=False, kind="stable").head(15)
+    return [
+        {
+            "gps": f"{row.gps_time:.3f}",
+            "utc": gps_to_utc_text(row.gps_time)[11:],
+            "frequency": f"{row.frequency_hz:.1f}",
+            "snr": f"{row.snr:.1f}",
+            "length": f"{row.gps_end - row.gps_start:.2f}",
+            "family": _text(row.family),
+            "witness": _text(row.witness).replace(";", ", ") or "none",
+            "veto": _text(row.veto).replace(";", ", ") or "none",
+        }
+        for row in rows.itertuples()
+    ]
+
+
+def _channels(night: NightTables) -> list[dict]:
+    return [
+        {
+            "channel": row.channel,
+            "role": row.role,
+            "rate": "" if pd.isna(row.sample_rate_hz) else f"{row.sample_rate_hz:g}",
+            "band": ""
+            if pd.isna(row.f_low_hz)
+            else f"{row.f_low_hz:.3g} – {row.f_high_hz:.4g}",
+            "analysed": "" if pd.isna(row.analysed_s) else f"{row.analysed_s:.1f}",
+            "transients": "" if pd.isna(row.transients) else int(row.transients),
+            "status": _text(row.status).replace("_", " "),
+            "reason": _text(row.reason),
+        }
+        for row in night.channels.itertuples()
+    ]
