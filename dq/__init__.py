@@ -15,9 +15,9 @@ report        the page for people, and the answer about one time
 night         every stage over every channel, resumable
 cli           the command line: parses, calls, prints
 
-Beside the flow: ``config``, ``tables``, ``counting`` and ``errors`` are the ground that
-every stage stands on; ``observatory`` makes the invented site and is imported by no
-stage.
+Beside the flow: ``config``, ``tables``, ``counting``, ``gps`` and ``errors`` are the
+ground that every stage stands on; ``observatory`` makes the invented site and is
+imported by no stage.
 
 ``import dq`` loads no stage; a public name is fetched when it is first used.
 """

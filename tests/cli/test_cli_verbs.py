@@ -133,8 +133,10 @@ def test_explain_a_burst_and_an_unjudged_time(done, capsys):
     _, out, _ = done
     assert main(["explain", str(out), str(SITE_START + SITE_BURSTS[3])]) == 0
     assert "OV-A" in capsys.readouterr().out
-    assert main(["explain", str(out), str(SITE_START - 100)]) == 0
-    assert "not" in capsys.readouterr().out
+    assert main(["explain", str(out), f"{SITE_START}.5"]) == 0
+    assert "neither clean nor vetoed" in capsys.readouterr().out
+    assert main(["explain", str(out), str(SITE_START - 100)]) == 2
+    assert "outside the night" in capsys.readouterr().err
 
 
 def test_veto_prints_the_cost(done, capsys):
