@@ -8,26 +8,30 @@ accounted for as unjudged. Blocks go through the tiling several at a time.
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass, field
 
 import numpy as np
 import pandas as pd
 
-from dq.conditioning.faults import classify, equal_runs
 from dq.conditioning.whiten import (
     Whitening,
     design_whitening,
-    difference_response,
     whitened_spectrum,
 )
 from dq.config import Config
 from dq.errors import ChannelError, NoDataError
+from dq.night.blocks import (
+    MAX_SETTLING_S,
+    BlockPlan,
+    default_low_edge,
+    plan_blocks,
+)
+from dq.night.fault_log import FaultLog
 from dq.night.spectra import FrameSpectra
 from dq.night.stream import Piece, SampleWindow
 from dq.segments import Segments
 from dq.tables import TRANSIENTS, conform
-from dq.tiles import TilePlan, band_weights, plan_tiles, tile_runs
+from dq.tiles import tile_runs
 from dq.transients import (
     LINK,
     Marks,
@@ -38,16 +42,6 @@ from dq.transients import (
 )
 
 _NS = 1_000_000_000
-
-#: Blocks that go through the tiling together: the FFT library works on several side by
-#: side (measured: 8 run four times as fast as one at a time), and slow channels share
-#: the cost of a row's calls among more. Samples per batch, and bounds on the blocks.
-BATCH_SAMPLES = 2**21
-BATCH_BLOCKS = (8, 32)
-
-#: Longest settling time of tile and filter at the ends of data, s. Longer tiles are
-#: left out of the plan: they would cost more unjudged time than they find (own choice).
-MAX_SETTLING_S = 8.0
 
 #: Runs carried over from batch to batch before clusters are cut at the batch's end, so
 #: that a channel which never falls below threshold cannot fill the memory.
@@ -88,84 +82,6 @@ class ChannelResult:
     notes: list[str] = field(default_factory=list)
 
 
-def default_low_edge(sample_rate: float) -> float:
-    """Give the lower edge of the band where nobody chose one, Hz."""
-    return min(max(sample_rate / 50.0, 1.0), 10.0)
-
-
-@dataclass(frozen=True)
-class BlockPlan:
-    """Everything about the blocks of one channel that does not depend on its data."""
-
-    rate: float
-    block_ns: int
-    batch: int
-    pad_ns: int
-    segment: int
-    half_length: int
-    tiles: TilePlan
-    weights: object
-    difference: np.ndarray
-
-    @property
-    def batch_ns(self) -> int:
-        """Length of a batch of blocks."""
-        return self.batch * self.block_ns
-
-
-def plan_blocks(rate, config: Config, f_low: float, f_high: float | None) -> BlockPlan:
-    """Plan block, padding and tiles for a sample rate.
-
-    Raises
-    ------
-    PlanError
-        The band does not fit the rate.
-    """
-    from scipy.fft import next_fast_len
-
-    settings, tiles = config.conditioning, config.tiles
-    fs = float(rate)
-    segment = 2 * max(round(settings.spectrum_segment_s * fs / 2), 8)
-    half = round(settings.whitening_half_length_s * fs)
-    half = min(max(half, 4), segment // 2)
-    limit = MAX_SETTLING_S - half / fs
-    options = {
-        "f_low": f_low,
-        "f_high": f_high,
-        "q_min": tiles.q_min,
-        "q_max": tiles.q_max,
-        "mismatch": tiles.mismatch,
-        "max_settling_s": limit,
-    }
-    probe = plan_tiles(fs, round(tiles.block_s * fs), **options)
-    pad = math.ceil(4 * (half / fs + probe.settling_s + 2 / fs)) / 4
-    for step in range(17):
-        samples = round((tiles.block_s + 2 * (pad + step / 4)) * fs)
-        if next_fast_len(samples, real=True) == samples:
-            pad += step / 4
-            break
-    samples = round((tiles.block_s + 2 * pad) * fs)
-    plan = plan_tiles(fs, samples, **options)
-    frequency = np.arange(segment // 2 + 1) * (fs / segment)
-    return BlockPlan(
-        rate=fs,
-        block_ns=round(tiles.block_s * _NS),
-        batch=_batch_blocks(tiles.block_s * fs),
-        pad_ns=round(pad * _NS),
-        segment=segment,
-        half_length=half,
-        tiles=plan,
-        weights=band_weights(plan, frequency),
-        difference=difference_response(frequency, fs),
-    )
-
-
-def _batch_blocks(samples: float) -> int:
-    """Give how many blocks of ``samples`` go together, a power of two."""
-    blocks = 2 ** round(math.log2(BATCH_SAMPLES / samples))
-    return int(min(max(blocks, BATCH_BLOCKS[0]), BATCH_BLOCKS[1]))
-
-
 @dataclass
 class _Item:
     """One transform: a piece's samples around one block, and the time it judges."""
@@ -177,44 +93,6 @@ class _Item:
     spectrum: np.ndarray
     level: np.ndarray
     noise: np.ndarray
-
-
-class _FaultLog:
-    """Collects the suspicious runs of the night until the extremes are known."""
-
-    def __init__(self) -> None:
-        self.lowest, self.highest = math.inf, -math.inf
-        self._rows: list[tuple] = []
-
-    def examine(self, pieces: list[Piece]) -> Segments:
-        """Record the runs of the window; give the time of all of them."""
-        starts, ends = [], []
-        for piece in pieces:
-            self.lowest = min(self.lowest, float(piece.values.min()))
-            self.highest = max(self.highest, float(piece.values.max()))
-            runs = equal_runs(piece.values)
-            for i in range(len(runs.first)):
-                low = piece.time_ns(int(runs.first[i]))
-                high = piece.time_ns(int(runs.first[i] + runs.length[i]))
-                value, flat = float(runs.value[i]), bool(runs.flat[i])
-                self._rows.append((low, high, value, flat, bool(runs.plateau[i])))
-                starts.append(low)
-                ends.append(high)
-        return Segments.from_arrays(starts, ends)
-
-    def segments(self, wanted: Segments) -> dict[str, Segments]:
-        """Give the faults by kind, within the wanted time."""
-        low, high, value, flat, plateau = (
-            map(np.array, zip(*self._rows, strict=True))
-            if self._rows
-            else (np.zeros(0, dtype=t) for t in (int, int, float, bool, bool))
-        )
-        kinds = classify(value, flat, plateau, lowest=self.lowest, highest=self.highest)
-        out = {}
-        for kind in ("saturation", "flat_line", "dropout"):
-            chosen = kinds == kind
-            out[kind] = Segments.from_arrays(low[chosen], high[chosen]) & wanted
-        return out
 
 
 class _ChannelRun:
@@ -233,7 +111,7 @@ class _ChannelRun:
             frame_ns=round(settings.spectrum_frame_s * _NS),
             span_ns=round(settings.spectrum_span_s * _NS),
         )
-        self.faults = _FaultLog()
+        self.faults = FaultLog()
         self.finite: list[tuple[int, int]] = []
         self.analysed: list[tuple[int, int]] = []
         self.tables: list[dict] = []

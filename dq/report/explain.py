@@ -125,7 +125,7 @@ def _transient_lines(near: pd.DataFrame, time_ns: int, window_s: float) -> list[
         sure = "" if pd.isna(row.probability) else f" ({row.probability:.2f})"
         lines.append(
             f"    {_offset(row.gps_time, time_ns)}: SNR {row.snr:.1f} at "
-            f"{row.frequency_hz:.1f} Hz ({row.f_low_hz:.0f} to {row.f_high_hz:.0f} Hz), "
+            f"{row.frequency_hz:.1f} Hz ({row.f_low_hz:.0f}-{row.f_high_hz:.0f} Hz), "
             f"{row.gps_end - row.gps_start:.2f} s long, family {row.family}{sure}"
         )
     return lines
@@ -157,10 +157,8 @@ def _heard(night: NightTables, time_ns: int, window_s: float) -> list[str]:
         near = _near(tables.get(channel, night.strain.iloc[:0]), time_ns, window_s)
         if len(near):
             best = near.loc[near["snr"].idxmax()]
-            lines.append(
-                f"    {channel}: SNR {best['snr']:.1f} at {best['frequency_hz']:.1f} Hz, "
-                f"{_offset(best['gps_time'], time_ns)}"
-            )
+            loud = f"SNR {best['snr']:.1f} at {best['frequency_hz']:.1f} Hz"
+            lines.append(f"    {channel}: {loud}, {_offset(best['gps_time'], time_ns)}")
     return lines
 
 
@@ -190,10 +188,12 @@ def _sentence(time_ns: int, analysed, covering, near, active) -> str:
     if len(covering):
         vetoes = ", ".join(dict.fromkeys(covering["veto"]))
         worst = int(covering["category"].min())
-        return (
-            f"GPS {at} is vetoed by {vetoes} (category {worst}); check that no signal "
-            "reaches the witness before the time is given up."
-        )
+        advice = "its data cannot be used."
+        if worst > 1:
+            advice = (
+                "check that no signal reaches the witness before the time is given up."
+            )
+        return f"GPS {at} is vetoed by {vetoes} (category {worst}); {advice}"
     if len(near):
         loudest = near.loc[near["snr"].idxmax()]
         seen = f"witnessed by {names}" if active else "without a witness"

@@ -26,9 +26,9 @@ OKABE_ITO = (
     "#000000",
 )
 CATEGORY_STYLE = {
-    1: ("#000000", "category 1: unusable data"),
-    2: ("#0072B2", "category 2: safe witness"),
-    3: ("#E69F00", "category 3: association"),
+    1: ("#000000", "1 unusable"),
+    2: ("#0072B2", "2 safe witness"),
+    3: ("#E69F00", "3 association"),
 }
 _INK = "#22303c"
 _STYLE = {
@@ -91,24 +91,17 @@ def map_of_transients(night: NightTables) -> str:
 
 
 def _veto_bands(axes, night: NightTables) -> None:
-    for level, (category, (colour, label)) in enumerate(CATEGORY_STYLE.items()):
+    for level, (category, (colour, _)) in enumerate(CATEGORY_STYLE.items()):
         rows = night.vetoes[night.vetoes["category"] == category]
         spans = _minutes(segments_of(rows), night.start_ns)
         # a veto of a tenth of a second must still be seen on a line of hours
         least = (night.end_ns - night.start_ns) / NS / 60 / 900
         spans = [(s, max(w, least)) for s, w in spans]
         axes.broken_barh(spans, (2 - level + 0.1, 0.8), color=colour, linewidth=0)
-        axes.text(
-            1.0,
-            2 - level + 0.5,
-            f" {label}",
-            transform=axes.get_yaxis_transform(),
-            va="center",
-            fontsize=7.5,
-        )
     axes.set_ylim(0, 3)
-    axes.set_yticks([])
-    axes.set_ylabel("vetoes", rotation=0, ha="right", va="center")
+    labels = [label for _, label in CATEGORY_STYLE.values()]
+    axes.set_yticks([2.5, 1.5, 0.5], labels, fontsize=8)
+    axes.tick_params(left=False)
     axes.spines["left"].set_visible(False)
     axes.tick_params(labelbottom=False)
 

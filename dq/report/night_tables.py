@@ -115,15 +115,18 @@ def _json(directory: Path, name: str) -> dict:
         return json.loads((directory / name).read_text(encoding="utf-8"))
     except (OSError, ValueError) as error:
         raise InputError(
-            f"{str(directory)!r} holds no finished night: cannot read {name} ({error}); "
-            "run dq night"
+            f"{str(directory)!r} holds no finished night: cannot read {name} "
+            f"({error}); run dq night"
         ) from error
 
 
 def _table(directory: Path, name: str, columns: tuple[Column, ...]) -> pd.DataFrame:
     try:
-        return csv_table((directory / name).read_text(encoding="utf-8"), columns)
+        table = csv_table((directory / name).read_text(encoding="utf-8"), columns)
     except (OSError, UnicodeDecodeError) as error:
         raise InputError(
             f"cannot read {str(directory / name)!r}: {error}; run the night again"
         ) from error
+    # people read an empty text as empty, not as a missing value
+    texts = {c.name: table[c.name].fillna("") for c in columns if c.kind == "text"}
+    return table.assign(**texts)
