@@ -24,6 +24,10 @@ from dq.errors import PlanError
 #: A Q below this would need negative frequencies in the window (sqrt(11)).
 Q_MIN = math.sqrt(11.0)
 
+#: Coarse tiles of a row per bin of its window. At 1 they would just hold the row; the
+#: margin lets a short interpolation find the tiles between them (``midpoints``).
+OVERSAMPLING = 1.1
+
 #: Tiles are trusted this many sigma_t away from anything that is not data; the
 #: Gaussian envelope has fallen to exp(-9/4) of its amplitude, energy to 1.1 %.
 SETTLING_SIGMAS = 3.0
@@ -127,8 +131,8 @@ class TilePlan:
         Q and frequency (Hz) of each row.
     plane : ndarray of int, shape (n_rows,)
         Index of the row's plane.
-    tiles : ndarray of int, shape (n_rows,)
-        Tiles of the row over the whole transform, a product of small primes.
+    coarse : ndarray of int, shape (n_rows,)
+        Tiles of the row that are transformed, a product of small primes.
     first_bin : ndarray of int, shape (n_rows,)
         First spectrum bin of the row's window.
     windows : tuple of ndarray (float32)
@@ -141,9 +145,14 @@ class TilePlan:
     q: np.ndarray
     frequency: np.ndarray
     plane: np.ndarray
-    tiles: np.ndarray
+    coarse: np.ndarray
     first_bin: np.ndarray
     windows: tuple[np.ndarray, ...]
+
+    @property
+    def tiles(self) -> np.ndarray:
+        """Tiles of each row, two for every coarse one."""
+        return 2 * self.coarse
 
     @property
     def length_s(self) -> float:
@@ -272,14 +281,15 @@ def plan_tiles(
     first = np.floor((frequency - half_width) * length).astype(np.int64) + 1
     last = np.ceil((frequency + half_width) * length).astype(np.int64)
     first, last = np.maximum(first, 1), np.minimum(last, samples // 2)
-    windows, tiles = [], []
+    windows, coarse = [], []
     for k in range(len(q)):
         bins = np.arange(first[k], last[k]) / length
         window = bisquare((bins - frequency[k]) / half_width[k])
         window /= math.sqrt(np.sum(window**2))
         windows.append(window.astype(np.float32))
-        need = max(tiles_in_row(q[k], frequency[k], length, mismatch), len(bins))
-        tiles.append(next_fast_len(need))
+        tiles = tiles_in_row(q[k], frequency[k], length, mismatch)
+        need = max(math.ceil(tiles / 2), math.ceil(OVERSAMPLING * len(bins)))
+        coarse.append(next_fast_len(need))
     return TilePlan(
         sample_rate=sample_rate,
         samples=samples,
@@ -287,7 +297,7 @@ def plan_tiles(
         q=q,
         frequency=frequency,
         plane=plane,
-        tiles=np.array(tiles),
+        coarse=np.array(coarse),
         first_bin=first,
         windows=tuple(windows),
     )

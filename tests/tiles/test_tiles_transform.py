@@ -6,6 +6,7 @@ import scipy.stats
 
 from dq.tiles import plan_tiles, row_coefficients, tile_runs
 from dq.tiles.kernels import find_runs, single_tile
+from dq.tiles.midpoints import midpoint_error, midpoint_weights
 
 RATE = 1024.0
 LENGTH = 32
@@ -127,29 +128,102 @@ def test_planted_burst_comes_back_at_its_place(plan, rng):
         assert runs.energy[best] <= 25.0**2 / 2 * 1.001
 
 
+def slow_runs(energy, low, high, bound):
+    """Scan one row of fine energies with plain array operations."""
+    above = np.zeros(len(energy), bool)
+    above[low:high] = energy[low:high] >= bound
+    edges = np.flatnonzero(np.diff(above, prepend=False, append=False))
+    pairs = zip(edges[::2], edges[1::2] - 1, strict=True)
+    return [(int(a), int(b), int(a + np.argmax(energy[a : b + 1]))) for a, b in pairs]
+
+
 def test_runs_equal_a_slow_scan(rng):
-    """find_runs against a plain loop, with runs over chunk borders and both ends."""
-    x = rng.standard_normal((3, 3000)) + 1j * rng.standard_normal((3, 3000))
+    """find_runs against a plain scan, with runs over chunk borders and both ends."""
+    x = rng.standard_normal((3, 1500)) + 1j * rng.standard_normal((3, 1500))
     x = x.astype(np.complex64)
-    x[1, 250:270] = 9
-    x[2, 500:520] = 9
+    x[1, 125:135] = 9
+    x[2, 250:262] = 9
     low, high = np.array([0, 5, 511]), np.array([3000, 2990, 520])
     bound = np.array([4, 3, 5], dtype=np.float32)
+    weights = midpoint_weights()
     places, energies = np.empty((5000, 4), int), np.empty((5000, 4), np.float32)
-    found = find_runs(x.view(np.float32), low, high, bound, places, energies)
-    expected = []
+    none = np.zeros(3, dtype=np.float32)
+    found = find_runs(
+        x.view(np.float32), low, high, bound, none, weights, places, energies
+    )
+    expected, fine = [], []
     for item in range(3):
-        energy = x.real[item] ** 2 + x.imag[item] ** 2
-        above = np.zeros(3000, bool)
-        above[low[item] : high[item]] = (energy >= bound[item])[low[item] : high[item]]
-        edges = np.flatnonzero(np.diff(above, prepend=False, append=False))
-        for first, last in zip(edges[::2], edges[1::2] - 1, strict=True):
-            peak = first + int(np.argmax(energy[first : last + 1]))
-            expected.append((item, first, last, peak))
+        around = np.arange(-len(weights) // 2 + 1, len(weights) // 2 + 1)
+        index = (np.arange(1500)[:, None] + around) % 1500
+        between = x[item][index].astype(complex) @ weights.astype(float)
+        both = np.stack([x[item], between], axis=1).ravel()
+        fine.append(np.abs(both) ** 2)
+        runs = slow_runs(fine[-1], low[item], high[item], bound[item])
+        expected += [(item, *run) for run in runs]
     assert found == len(expected) > 100
     np.testing.assert_array_equal(places[:found], expected)
-    peaks = x[places[:found, 0], places[:found, 3]]
-    np.testing.assert_allclose(energies[:found, 0], np.abs(peaks) ** 2, rtol=1e-5)
+    item, peak = places[:found, 0], places[:found, 3]
+    fine = np.array(fine)
+    for offset, column in ((0, 0), (-1, 1), (1, 2)):
+        want = fine[item, (peak + offset) % 3000]
+        np.testing.assert_allclose(energies[:found, column], want, rtol=1e-3, atol=1e-4)
+
+
+def test_midpoints_are_the_tiles_of_the_whole_row(plan, rng):
+    assert midpoint_error() < 8e-4
+    spectra = white_spectra(rng)
+    for row in range(0, len(plan.q), 7):
+        whole = row_coefficients(spectra, plan, row)[0]
+        coarse, between = whole[::2], whole[1::2]
+        width = len(plan.windows[row])
+        if width < 40:
+            continue
+        weights = midpoint_weights()
+        around = np.arange(-len(weights) // 2 + 1, len(weights) // 2 + 1)
+        index = (np.arange(len(coarse))[:, None] + around) % len(coarse)
+        error = np.abs(coarse[index] @ weights - between)
+        assert np.sqrt(np.mean(error**2)) < 3e-3
+
+
+@pytest.mark.parametrize("threshold", [8.0, 16.125])
+def test_screened_search_equals_the_full_plan(plan, threshold):
+    """Coarse tiles and a close look find what the transform of all tiles finds."""
+    options = {"start_s": [2.0] * 8, "end_s": [30.0] * 8, "threshold": threshold}
+    level = np.ones((8, len(plan.q)))
+    found, missed, extra = 0, [], []
+    for night in range(6):
+        rng = np.random.default_rng(night)
+        x = rng.standard_normal((8, SAMPLES))
+        for item in range(8):
+            t0, f0 = rng.uniform(4, 28), 30 * 8 ** rng.random()
+            x[item] += sine_gaussian(t0, f0, rng.uniform(4, 30), rng.uniform(5, 12))
+        spectra = (np.fft.rfft(x, axis=1) / np.sqrt(SAMPLES)).astype(np.complex64)
+        runs = tile_runs(spectra, plan, level=level, **options)
+        got = {}
+        for k in range(len(runs)):
+            key = (runs.item[k], runs.row[k])
+            got.setdefault(key, []).append((runs.peak[k], runs.energy[k]))
+        for row in range(len(plan.q)):
+            energy = np.abs(row_coefficients(spectra, plan, row)) ** 2
+            low, high = (int(np.ceil(t / LENGTH * plan.tiles[row])) for t in (2, 30))
+            for item in range(8):
+                want = slow_runs(energy[item], low, high, threshold)
+                mine = dict(got.pop((item, row), []))
+                for _, _, peak in want:
+                    # two tiles of equal energy may change places
+                    near = [p for p in (peak, peak - 1, peak + 1) if p in mine]
+                    if near:
+                        found += 1
+                        loud = energy[item, peak]
+                        assert mine.pop(near[0]) == pytest.approx(loud, rel=0.02)
+                    else:
+                        missed.append(energy[item, peak])
+                extra += list(mine.values())
+        assert not got or max(e for v in got.values() for _, e in v) < threshold * 1.02
+    assert found > (3000 if threshold < 10 else 300)
+    # only runs that graze the threshold may differ, by the error of a mid-point
+    assert max([*missed, *extra], default=0.0) < threshold * 1.02
+    assert len(missed) + len(extra) < 0.02 * found
 
 
 def test_more_runs_than_first_guessed_are_all_kept(plan, rng):
