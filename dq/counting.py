@@ -4,13 +4,17 @@ from __future__ import annotations
 
 import numpy as np
 
+#: Below this chance the incomplete gamma function nears the end of float64.
+_FAR = 1e-250
+
 
 def poisson_significance(count, expected) -> np.ndarray:
     """Give -log10 of the chance of at least ``count`` events when ``expected`` come.
 
     Parameters
     ----------
-    count : array_like of int
+    count : array_like of float
+        Whole numbers, or counts divided by a dispersion.
     expected : array_like of float
 
     Returns
@@ -32,16 +36,19 @@ def poisson_significance(count, expected) -> np.ndarray:
     """
     from scipy.special import gammainc, gammaln, hyp1f1
 
-    n = np.asarray(count, dtype=float)
-    mu = np.asarray(expected, dtype=float)
-    n, mu = np.broadcast_arrays(n, mu)
-    with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
-        tail = np.where(n > 0, gammainc(np.maximum(n, 1.0), mu), 1.0)
-        direct = -np.log10(tail)
-        series = np.log(hyp1f1(1.0, n + 1.0, np.minimum(mu, n)))
-        logs = n * np.log(mu) - mu - gammaln(n + 1.0) + series
-        far = -logs / np.log(10.0)
-    out = np.where(tail > 1e-250, direct, far)
+    n, mu = np.broadcast_arrays(
+        np.asarray(count, dtype=float), np.asarray(expected, dtype=float)
+    )
+    some = (n > 0) & (mu > 0)
+    n_, mu_ = np.where(some, n, 1.0), np.where(some, mu, 1.0)
+    tail = gammainc(n_, mu_)
+    far = tail < _FAR
+    out = -np.log10(np.where(far, 1.0, tail))
+    if np.any(far):
+        k, m = np.where(far, n_, 1.0), np.where(far, mu_, 1.0)
+        series = np.log(hyp1f1(1.0, k + 1.0, m))
+        logs = k * np.log(m) - m - gammaln(k + 1.0) + series
+        out = np.where(far, -logs / np.log(10.0), out)
     out = np.where((mu <= 0) & (n > 0), np.inf, out)
     return np.where(n <= 0, 0.0, np.maximum(out, 0.0))
 

@@ -82,6 +82,13 @@ WITNESSES: tuple[Column, ...] = (
     Column("safety", "text", meaning="safe, unsafe, or cannot tell"),
     Column("accepted", "flag"),
     Column("reason", "text"),
+    Column("clusters", "int", "1", "%d", "clusters of strain transients met"),
+    *_floats(
+        ("clusters_expected", "1", "%.6g", "clusters met by chance, at most"),
+        ("dispersion", "1", "%.4f", "variance over mean of shifted counts"),
+        ("calibrated_significance", "1", "%.4f", "what the decision rests on"),
+    ),
+    Column("trials", "int", "1", "%d", "combinations tested in all channels"),
 )
 
 #: Columns of ``vetoes.csv``.

@@ -15,9 +15,8 @@ if TYPE_CHECKING:
 
     from dq.config import Vetoes
 
-#: Faults in which data exist but cannot be used; what is not finite is missing time
-#: and was not analysed.
-FAULTS = ("saturation", "flat_line", "dropout")
+#: Order of the kinds of faults; kinds not named here follow by name.
+FAULTS = ("saturation", "flat_line", "dropout", "not_finite")
 
 #: Categories, common practice: 1 the data cannot be used; 2 a safe witness; 3
 #: statistical association only.
@@ -52,7 +51,8 @@ def build_vetoes(
     auxiliary : mapping of str to pandas.DataFrame
         Transients of the channels.
     faults : mapping of str to Segments
-        The strain's faults by kind.
+        The strain's faults by kind. A kind that lies wholly outside analysed time, as
+        values that are not finite do, makes no veto: nobody judged that time.
     analysed : Segments
     settings : dq.config.Vetoes
 
@@ -63,11 +63,11 @@ def build_vetoes(
     """
     rows: list[tuple] = []
     pad = round(settings.fault_padding_s * NS)
-    for kind in FAULTS:
-        time = faults.get(kind, Segments.none()).pad(pad) & analysed
-        name = f"fault-{kind.replace('_', '-')}"
-        rows += [(s, e, name, UNUSABLE, "fault", "", "") for s, e in time]
     used: set[str] = set()
+    for kind in sorted(faults, key=_place):
+        time = faults[kind].pad(pad) & analysed
+        name = _unique(f"fault-{file_safe(kind.replace('_', '-'))}", used)
+        rows += [(s, e, name, UNUSABLE, "fault", "", "") for s, e in time]
     accepted = witnesses[witnesses["accepted"].fillna(False).astype(bool)]
     for row in accepted.itertuples():
         windows = veto_windows(
@@ -83,6 +83,10 @@ def build_vetoes(
             for s, e in windows & analysed
         ]
     return _frame(rows)
+
+
+def _place(kind: str) -> tuple[int, str]:
+    return (FAULTS.index(kind) if kind in FAULTS else len(FAULTS)), kind
 
 
 def _unique(name: str, used: set[str]) -> str:

@@ -1,17 +1,19 @@
 """Which vetoes to apply under a dead-time budget.
 
-Faults come first: their data cannot be used whatever the budget says. Witness vetoes
-are then taken greedily by transients removed per second of dead time added, as long as
-they fit. The best single veto that fits is compared at the end and wins if it removes
-more (Khuller, Moss & Naor 1999, Inf. Proc. Lett. 70 39): greed alone can fall into the
-trap of a cheap small gain that shuts out a large one. Dead time is that of the union,
-so vetoes that share time pay once; the guarantees proved for added-up costs refer to a
-budget that is never larger than this one's use.
+Faults come first: their data cannot be used whatever the budget says, and where they
+alone exceed it no witness veto is taken. Witness vetoes are then taken greedily by
+transients removed per second of dead time added, as long as they fit. The best single
+veto that fits is compared at the end and wins if it removes more (Khuller, Moss & Naor
+1999, Inf. Proc. Lett. 70 39): greed alone can fall into the trap of a cheap small gain
+that shuts out a large one. Dead time is that of the union, so vetoes that share time
+pay once; the guarantees proved for added-up costs are outside this rule. Ties go to the
+veto that stands earlier in the table.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
+from fractions import Fraction
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -22,7 +24,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 
-@dataclass
+@dataclass(eq=False)
 class _Candidate:
     name: str
     segments: Segments
@@ -57,7 +59,8 @@ def choose_vetoes(
     """
     times = to_ns_array(strain["gps_time"].to_numpy(float))
     times = times[analysed.contains(times)]
-    budget = int(max_dead_time * analysed.total_ns)
+    # as written in decimals: 0.1 of 1000 s is 100 s, not a nanosecond less
+    budget = int(Fraction(str(max_dead_time)) * analysed.total_ns)
     taken, removed = Segments.none(), np.zeros(len(times), dtype=bool)
     chosen, candidates = [], []
     for name, rows in vetoes.groupby("veto", sort=False):
@@ -122,13 +125,19 @@ def _greedy(candidates, taken, removed, budget) -> list[_Candidate]:
 
 
 def _reasons(candidates, picked, taken, removed, budget) -> dict[str, str]:
-    gone = _holds(picked, removed)
+    gone, over = _holds(picked, removed), taken.total_ns - budget
     for candidate in picked:
         taken = taken | candidate.segments
     room = max(budget - taken.total_ns, 0) / NS
+    left = f"{room:.3f} s of the budget are left"
+    if over > 0:
+        left = f"faults alone exceed the budget by {over / NS:.3f} s"
     refused = {}
     for candidate in candidates:
         if candidate in picked:
+            continue
+        if not np.any(candidate.holds):
+            refused[candidate.name] = "adds nothing: it holds no strain transient"
             continue
         if not np.any(candidate.holds & ~gone):
             refused[candidate.name] = (
@@ -137,7 +146,7 @@ def _reasons(candidates, picked, taken, removed, budget) -> dict[str, str]:
             continue
         added = ((taken | candidate.segments).total_ns - taken.total_ns) / NS
         refused[candidate.name] = (
-            f"does not fit: adds {added:.3f} s of dead time, {room:.3f} s of the "
-            "budget are left; raise vetoes.max_dead_time to allow it"
+            f"does not fit: adds {added:.3f} s of dead time, {left}; raise "
+            "vetoes.max_dead_time to allow it"
         )
     return refused

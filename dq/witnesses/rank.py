@@ -3,62 +3,44 @@
 For every auxiliary channel, every threshold of a ladder and every half-window of
 another, the strain's transients inside the union of windows are counted. If the
 channel had nothing to do with the strain, a fraction of them equal to the dead time
-would fall inside (chance efficiency = dead time), so mu = N d, and the significance of
-n is the Poisson one (Smith et al. 2011, Class. Quantum Grav. 28 235005).
+would fall inside (chance efficiency = dead time), so mu = N d, and ``significance`` is
+the Poisson one of the coincidences (Smith et al. 2011, Class. Quantum Grav. 28 235005).
 
-Transients come in bursts, and a burst that falls into one window counts many times:
-the Poisson law is then too narrow. For the best combination of a channel the strain is
-therefore also shifted around the jointly analysed time many times; the ratio of
-variance to mean of the shifted counts, the dispersion, divides count and expectation
-before the chance is computed (quasi-Poisson, common practice in counting statistics).
-It is never taken below 1. The trials are all combinations that were tested.
+Bursts break the Poisson law, so the decision rests on ``calibrated_significance``: the
+smallest of the Poisson significance of the coincidences, that of separate clusters of
+transients, and that of the clusters widened by what circular shifts of the strain show
+(``dq.witnesses.chance``). Shifts are only measured where the first two would accept;
+they never raise a significance. One trial is one (channel, threshold, half-window)
+that was tested, unsafe channels included; ``p_value`` is the calibrated chance times
+all trials (Bonferroni), at most 1.
 """
 
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from dq.counting import poisson_significance
-from dq.segments import NS, Segments, to_ns_array
+from dq.segments import Segments, to_ns_array
 from dq.tables import WITNESSES, conform
-from dq.witnesses.windows import FusedTime, hits, union_of_windows
+from dq.witnesses.ladder import (
+    Combination,
+    JointStrain,
+    calibrate,
+    climb,
+    sorted_transients,
+)
 
 if TYPE_CHECKING:
     import pandas as pd
 
     from dq.config import Witnesses
 
-#: Shifts that measure the dispersion; 400 give it to 7 %.
-SHIFTS = 400
-
-#: Shifts keep at least this far from no shift, s: beyond every window.
-LEAST_SHIFT_S = 10.0
-
-#: The golden ratio's fraction spreads shifts evenly and matches no period.
-_GOLDEN = 0.6180339887498949
-
 _SAFETY = {"yes": "safe", "no": "unsafe", "": "cannot tell"}
 
-
-@dataclass(frozen=True)
-class _Best:
-    """The most significant combination of one channel."""
-
-    threshold: float
-    half_window: float
-    count: int
-    expected: float
-    significance: float
-    calibrated: float
-    dispersion: float
-    windows_hit: int
-    windows: int
-    dead_s: float
-    total: int
+#: Shifted counts this many times wider than Poisson's are worth a word.
+_WIDE = 1.5
 
 
 def find_witnesses(
@@ -76,7 +58,7 @@ def find_witnesses(
     Parameters
     ----------
     strain : pandas.DataFrame
-        Columns of ``dq.tables.TRANSIENTS``.
+        Columns of ``dq.tables.TRANSIENTS``; ``gps_time`` and ``snr`` are read.
     auxiliary : mapping of str to pandas.DataFrame
         The same for each auxiliary channel.
     analysed : Segments
@@ -84,7 +66,7 @@ def find_witnesses(
     auxiliary_analysed : mapping of str to Segments
     safety : mapping of str to str
         ``yes``, ``no`` or empty, from the channel list. A channel marked ``no`` is
-        never accepted and takes no part in the trials.
+        measured and never accepted.
     settings : dq.config.Witnesses
     target : str
         Name of what was tested, for the table.
@@ -92,180 +74,107 @@ def find_witnesses(
     Returns
     -------
     pandas.DataFrame
-        ``dq.tables.WITNESSES``: accepted channels in order of significance, then the
-        rest.
+        ``dq.tables.WITNESSES``: one row per channel with its most significant
+        combination; the accepted ones in order of ``significance``, then the rest in
+        the same order, ties by name.
     """
     times = np.sort(to_ns_array(strain["gps_time"].to_numpy(float)))
-    best: dict[str, _Best | None] = {}
+    shared: dict[Segments, JointStrain] = {}
+    best: dict[str, Combination | None] = {}
+    joint = {
+        n: analysed & auxiliary_analysed.get(n, Segments.none()) for n in auxiliary
+    }
     trials = 0
     for name in sorted(auxiliary):
-        if safety.get(name, "") == "no":
-            best[name] = None
-            continue
-        joint = analysed & auxiliary_analysed.get(name, Segments.none())
-        best[name], tested = _best_of(times, auxiliary[name], joint, settings)
+        best[name], tested = None, 0
+        if joint[name]:
+            if joint[name] not in shared:
+                shared[joint[name]] = JointStrain(times, joint[name])
+            here = shared[joint[name]]
+            when, snr = sorted_transients(auxiliary[name])
+            best[name], tested = climb(here, when, snr, settings)
         trials += tested
-    rows = [
-        _row(name, best[name], safety.get(name, ""), trials, settings, target)
-        for name in best
-    ]
+    for name, found in best.items():
+        if found and _p_value(found, trials) <= settings.false_alarm_probability:
+            when, snr = sorted_transients(auxiliary[name])
+            best[name] = calibrate(found, shared[joint[name]], when, snr)
+    rows = []
+    for name, found in best.items():
+        row = {"channel": name, "target": target}
+        row["safety"] = _SAFETY[safety.get(name, "")]
+        if found is None:
+            row["reason"] = _nothing(shared.get(joint[name]), auxiliary[name])
+        else:
+            row |= _measured(found, trials)
+            row["reason"] = _objection(row, found, settings)
+        rows.append(row)
     return _ordered(rows)
 
 
-def _best_of(times, transients, joint: Segments, settings) -> tuple[_Best | None, int]:
-    """Go through both ladders; give the best combination and the number tested."""
-    if not joint:
-        return None, 0
-    fused = FusedTime(joint)
-    inside = fused.position(times[joint.contains(times)])
-    when = to_ns_array(transients["gps_time"].to_numpy(float))
-    order = np.argsort(when, kind="stable")
-    when, snr = when[order], transients["snr"].to_numpy(float)[order]
-    tested, best = 0, None
-    for threshold in settings.snr_thresholds:
-        loud = when[snr >= threshold]
-        if len(loud) == 0 or len(inside) == 0:
-            continue
-        for half_window in settings.half_windows_s:
-            found = _combination(inside, loud, fused, threshold, half_window)
-            if found is None:
-                continue
-            tested += 1
-            # at equal significance the one that costs less time
-            if best is None or (found.significance, -found.dead_s) > (
-                best.significance,
-                -best.dead_s,
-            ):
-                best = found
-    if best is None:
-        return None, tested
-    return _calibrated(best, inside, when[snr >= best.threshold], fused), tested
+def _p_value(found: Combination, trials: int) -> float:
+    return float(10.0 ** min(np.log10(trials) - found.sober, 0.0))
 
 
-def _windows(loud, fused: FusedTime, half_window: float):
-    starts, ends = union_of_windows(loud, round(half_window * NS))
-    low, high = fused.position(starts), fused.position(ends)
-    kept = high > low
-    return low[kept], high[kept]
-
-
-def _combination(inside, loud, fused, threshold, half_window) -> _Best | None:
-    low, high = _windows(loud, fused, half_window)
-    dead = int(np.sum(high - low))
-    if dead == 0 or dead >= fused.total:
-        return None
-    hit = hits(inside, low, high)
-    hit = hit[hit >= 0]
-    expected = len(inside) * dead / fused.total
-    significance = float(poisson_significance(len(hit), expected))
-    return _Best(
-        threshold=threshold,
-        half_window=half_window,
-        count=len(hit),
-        expected=expected,
-        significance=significance,
-        calibrated=significance,
-        dispersion=1.0,
-        windows_hit=len(np.unique(hit)),
-        windows=len(low),
-        dead_s=dead / NS,
-        total=len(inside),
-    )
-
-
-def _calibrated(best: _Best, inside, loud, fused: FusedTime) -> _Best:
-    low, high = _windows(loud, fused, best.half_window)
-    dispersion = count_dispersion(inside, low, high, fused.total)
-    calibrated = poisson_significance(
-        best.count / dispersion, best.expected / dispersion
-    )
-    return _Best(
-        **{
-            **best.__dict__,
-            "dispersion": dispersion,
-            "calibrated": min(float(calibrated), best.significance),
-        }
-    )
-
-
-def count_dispersion(
-    positions: np.ndarray, starts: np.ndarray, ends: np.ndarray, total: int
-) -> float:
-    """Give variance over mean of the counts in windows under circular shifts.
-
-    Parameters
-    ----------
-    positions, starts, ends : ndarray of int64
-        Events and windows on the fused time line, nanoseconds.
-    total : int
-        Length of the line.
-
-    Returns
-    -------
-    float
-        At least 1.
-    """
-    shifts = (np.arange(1, SHIFTS + 1) * _GOLDEN % 1.0 * total).astype(np.int64)
-    least = min(round(LEAST_SHIFT_S * NS), total // 4)
-    shifts = shifts[(shifts >= least) & (shifts <= total - least)]
-    counts = np.empty(len(shifts))
-    # rows of bounded size: a million shifted events at a time
-    step = max(1_000_000 // max(len(positions), 1), 1)
-    for k in range(0, len(shifts), step):
-        moved = (positions[None, :] + shifts[k : k + step, None]) % total
-        counts[k : k + step] = np.sum(hits(moved, starts, ends) >= 0, axis=1)
-    mean = counts.mean() if len(counts) else 0.0
-    if mean == 0.0:
-        return 1.0
-    return max(float(counts.var() / mean), 1.0)
-
-
-def _row(name, best: _Best | None, safety, trials, settings, target) -> dict:
-    row = {"channel": name, "target": target, "safety": _SAFETY[safety]}
-    row["accepted"] = False
-    if safety == "no":
-        return {**row, "reason": "marked unsafe in the channel list: never used"}
-    if best is None:
-        return {**row, "reason": "no transients in jointly analysed time"}
-    logarithm = min(np.log10(max(trials, 1)) - best.calibrated, 0.0)
-    p_value = float(10.0**logarithm)
-    row |= {
-        "snr_threshold": best.threshold,
-        "half_window_s": best.half_window,
-        "coincidences": best.count,
-        "expected": best.expected,
-        "significance": best.significance,
-        "p_value": p_value,
-        "efficiency": best.count / best.total,
-        "dead_time_s": best.dead_s,
-        "use_fraction": best.windows_hit / best.windows,
-        "calibrated": best.calibrated,
+def _measured(found: Combination, trials: int) -> dict:
+    return {
+        "snr_threshold": found.threshold,
+        "half_window_s": found.half_window_s,
+        "coincidences": found.coincidences,
+        "expected": found.expected,
+        "significance": found.significance,
+        "p_value": _p_value(found, trials),
+        "efficiency": found.coincidences / found.total,
+        "dead_time_s": found.dead_s,
+        "use_fraction": found.windows_hit / found.windows,
+        "clusters": found.clusters,
+        "clusters_expected": found.clusters_expected,
+        "dispersion": found.dispersion,
+        "calibrated_significance": found.sober,
+        "trials": trials,
     }
+
+
+def _nothing(here: JointStrain | None, transients) -> str:
+    if here is None:
+        return "no jointly analysed time"
+    if len(here.positions) == 0:
+        return "no strain transients in jointly analysed time"
+    if len(transients) == 0:
+        return "no transients"
+    return "no windows in jointly analysed time, or windows that fill it all"
+
+
+def _objection(row: dict, found: Combination, settings) -> str:
+    """Give the reason; fills ``accepted`` of the row."""
+    p_value, trials = row["p_value"], row["trials"]
     bound = settings.false_alarm_probability
-    if best.windows_hit < settings.min_coincidences:
-        return {
-            **row,
-            "reason": f"only {best.windows_hit} separate coincidences, fewer than "
-            f"{settings.min_coincidences}",
-        }
-    burst = ""
-    if best.dispersion > 1.5:
-        burst = f"; shifted counts scatter {best.dispersion:.1f} times Poisson"
+    wide = ""
+    if found.dispersion > _WIDE:
+        wide = f"; shifted counts scatter {found.dispersion:.1f} times Poisson"
+    if row["safety"] == "unsafe":
+        return "marked unsafe in the channel list: never used"
     if p_value > bound:
-        reason = f"not significant: p = {p_value:.2g} > {bound:g} over {trials} trials"
-        return {**row, "reason": reason + burst}
-    reason = f"accepted: p = {p_value:.2g} over {trials} trials"
-    return {**row, "accepted": True, "reason": reason + burst}
+        return (
+            f"not significant: p = {p_value:.2g} > {bound:g} over {trials} trials{wide}"
+        )
+    if found.separate < settings.min_coincidences:
+        return (
+            f"fewer than {settings.min_coincidences} separate coincidences: "
+            f"{found.separate}"
+        )
+    row["accepted"] = True
+    return f"accepted: p = {p_value:.2g} over {trials} trials{wide}"
 
 
 def _ordered(rows: list[dict]) -> pd.DataFrame:
     import pandas as pd
 
-    def key(row):
-        strength = row.pop("calibrated", -1.0)
-        return (not row["accepted"], -strength, row["channel"])
-
-    rows = [row for _, row in sorted((key(r), r) for r in rows)] if rows else []
+    for row in rows:
+        row.setdefault("accepted", False)
+    rows = sorted(
+        rows,
+        key=lambda r: (not r["accepted"], -r.get("significance", -1.0), r["channel"]),
+    )
     for number, row in enumerate(rows, start=1):
         row["order"] = number if row["accepted"] else None
     frame = pd.DataFrame(rows) if rows else pd.DataFrame({"channel": []})

@@ -69,8 +69,18 @@ def test_faults_are_padded_clipped_and_category_one():
         [GPS + 4.5], [GPS + 6.5]
     )
     assert segments(out, "fault-flat-line").ends[0] == (GPS + 1000) * NS
-    assert set(out.veto) == {"fault-saturation", "fault-flat-line"}
+    assert out.veto.unique().tolist() == [
+        "fault-saturation", "fault-flat-line", "fault-not-finite",
+    ]  # fmt: skip
     assert (out.category == 1).all()
+
+
+def test_faults_outside_analysed_time_make_no_veto():
+    faults = {"not_finite": Segments.from_seconds([GPS + 2000], [GPS + 2001])}
+    out = build_vetoes(
+        witness_rows(), {}, faults, analysed=WHOLE, settings=Vetoes(fault_padding_s=0.5)
+    )
+    assert len(out) == 0
 
 
 def test_witness_windows_follow_threshold_half_window_and_safety():
@@ -152,7 +162,24 @@ def test_faults_come_first_even_beyond_the_budget():
     table = veto_rows(w=[(0, 1)], **{"fault-dropout": [(10, 90)]})
     chosen, refused = choose(table, [0.5], 0.05)
     assert chosen == ["fault-dropout"]
-    assert "0.000 s of the budget are left" in refused["w"]
+    assert "faults alone exceed the budget by 30.000 s" in refused["w"]
+
+
+def test_equal_vetoes_are_taken_in_the_order_of_the_table():
+    """Two of four that tie in gain and cost fit; a budget is used to its last ns."""
+    pairs = {"d": [(0, 50)], "a": [(100, 150)], "c": [(200, 250)], "b": [(300, 350)]}
+    seconds = [10, 110, 210, 310]
+    chosen, refused = choose(veto_rows(**pairs), seconds, 0.1)
+    assert chosen == ["d", "a"]
+    assert set(refused) == {"c", "b"}
+
+
+def test_time_shared_with_a_chosen_veto_costs_nothing_again():
+    """After a, b costs only what a does not cover and fits; c does not."""
+    table = veto_rows(a=[(0, 60)], b=[(10, 80)], c=[(500, 570)])
+    chosen, refused = choose(table, [5, 15, 30, 55, 70, 520, 530], 0.1)
+    assert chosen == ["a", "b"]
+    assert "20.000 s of the budget are left" in refused["c"]
 
 
 def test_what_adds_nothing_is_refused_with_its_reason():
@@ -164,7 +191,9 @@ def test_what_adds_nothing_is_refused_with_its_reason():
 
 def test_no_vetoes_and_no_transients():
     assert choose(veto_rows(), [1.0], 0.05) == ([], {})
-    assert choose(veto_rows(a=[(0, 1)]), [], 0.05)[0] == []
+    chosen, refused = choose(veto_rows(a=[(0, 1)]), [], 0.05)
+    assert chosen == []
+    assert "holds no strain transient" in refused["a"]
 
 
 @pytest.mark.parametrize("budget", [0.0, 1.0])
