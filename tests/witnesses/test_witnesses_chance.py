@@ -6,6 +6,7 @@ import pytest
 import scipy.stats
 
 from dq.config import Witnesses
+from dq.counting import poisson_significance
 from dq.segments import NS, Segments
 from dq.witnesses import find_witnesses
 from dq.witnesses.chance import (
@@ -178,6 +179,18 @@ def test_a_shared_rhythm_is_no_evidence_by_itself(rng):
     out = find(table(rng, clock + 0.1), {"OV-CLOCK": table(rng, clock)})
     assert out.significance.iloc[0] > 50
     assert not out.accepted.iloc[0]
+
+
+def test_the_decision_is_never_bolder_than_the_clusters():
+    for seed in range(5):
+        out = find(*uncoupled_night(seed, "heavy", channels=10))
+        out = out[out.clusters.notna()]
+        clusters = poisson_significance(
+            out.clusters.to_numpy(float), out.clusters_expected.to_numpy(float)
+        )
+        calibrated = out.calibrated_significance.to_numpy()
+        assert np.all(calibrated <= clusters + 1e-12)
+        assert np.all(calibrated <= out.significance.to_numpy() + 1e-12)
 
 
 def test_calibration_never_passes_what_shifts_reach():
