@@ -82,13 +82,61 @@ def _fine_energy(x: np.ndarray, fine: int, weights: np.ndarray) -> np.float32:
 
 
 @njit(cache=True, nogil=True)
-def _put(place, energy, run, sums, row, weights):
-    """Store one run: item, first, last, peak; loudest and summed energy."""
+def _put(places, energies, at, run, sums, row, weights):
+    """Store one run where there is room: its item, first, last, peak and energies."""
+    if at >= places.shape[0]:
+        return
     for i in range(4):
-        place[i] = run[i]
-    energy[0], energy[3] = sums
-    energy[1] = _fine_energy(row, run[3] - 1, weights)
-    energy[2] = _fine_energy(row, run[3] + 1, weights)
+        places[at, i] = run[i]
+    energies[at, 0], energies[at, 3] = sums
+    energies[at, 1] = _fine_energy(row, run[3] - 1, weights)
+    energies[at, 2] = _fine_energy(row, run[3] + 1, weights)
+
+
+@njit(cache=True, nogil=True)
+def _runs_in_row(row, item, within, bounds, weights, places, energies, found):
+    """Find the runs of one item; see :func:`find_runs`. Gives the new number found."""
+    n_coarse = row.shape[0] // 2
+    low, high = within
+    bound, screen = bounds
+    run = (item, 0, 0, 0)
+    loudest, total = np.float32(0.0), np.float32(0.0)
+    open_run = False
+    start, end = low // 2, (high + 1) // 2
+    while start < end:
+        stop = min(start + CHUNK, end)
+        # the tile after the chunk decides about the mid-point before it
+        after = _energy(row, stop % n_coarse)
+        largest = max(_largest_energy(row, start, stop), after)
+        if not open_run and largest < screen:
+            start = stop
+            continue
+        energy = _energy(row, start)
+        for k in range(start, stop):
+            following = _energy(row, k + 1) if k + 1 < stop else after
+            between = np.float32(0.0)
+            if energy >= screen or following >= screen:
+                between = _midpoint(row, k, weights)
+            for fine in range(2 * k, 2 * k + 2):
+                value = between if fine % 2 else energy
+                if value >= bound and low <= fine < high:
+                    if not open_run:
+                        open_run, run = True, (item, fine, fine, fine)
+                        loudest, total = value, np.float32(0.0)
+                    total += value
+                    peak = fine if value > loudest else run[3]
+                    loudest = max(loudest, value)
+                    run = (item, run[1], fine, peak)
+                elif open_run:
+                    open_run = False
+                    _put(places, energies, found, run, (loudest, total), row, weights)
+                    found += 1
+            energy = following
+        start = stop
+    if open_run:
+        _put(places, energies, found, run, (loudest, total), row, weights)
+        found += 1
+    return found
 
 
 @njit(cache=True, nogil=True)
@@ -118,66 +166,18 @@ def find_runs(x, low, high, threshold, screening, weights, places, energies):
         Number of runs found; when it exceeds the capacity the rest was not stored and
         the caller must come again with more room.
     """
-    capacity = places.shape[0]
     found = 0
     for item in range(x.shape[0]):
-        row = x[item]
-        n_coarse = row.shape[0] // 2
-        bound, screen = threshold[item], min(screening[item], threshold[item])
-        open_run = False
-        first, last, peak = 0, 0, 0
-        loudest, total = np.float32(0.0), np.float32(0.0)
-        start, end = low[item] // 2, (high[item] + 1) // 2
-        while start < end:
-            stop = min(start + CHUNK, end)
-            # the tile after the chunk decides about the mid-point before it
-            after = _energy(row, stop % n_coarse)
-            largest = max(_largest_energy(row, start, stop), after)
-            if open_run or largest >= screen:
-                energy = _energy(row, start)
-                for k in range(start, stop):
-                    following = _energy(row, k + 1) if k + 1 < stop else after
-                    between = np.float32(0.0)
-                    if energy >= screen or following >= screen:
-                        between = _midpoint(row, k, weights)
-                    for half in range(2):
-                        fine = 2 * k + half
-                        value = between if half else energy
-                        counts = value >= bound
-                        counts = counts and low[item] <= fine < high[item]
-                        if counts:
-                            if not open_run:
-                                open_run, first, peak = True, fine, fine
-                                loudest, total = value, np.float32(0.0)
-                            last = fine
-                            total += value
-                            if value > loudest:
-                                loudest, peak = value, fine
-                        elif open_run:
-                            open_run = False
-                            if found < capacity:
-                                _put(
-                                    places[found],
-                                    energies[found],
-                                    (item, first, last, peak),
-                                    (loudest, total),
-                                    row,
-                                    weights,
-                                )
-                            found += 1
-                    energy = following
-            start = stop
-        if open_run:
-            if found < capacity:
-                _put(
-                    places[found],
-                    energies[found],
-                    (item, first, last, peak),
-                    (loudest, total),
-                    row,
-                    weights,
-                )
-            found += 1
+        found = _runs_in_row(
+            x[item],
+            item,
+            (low[item], high[item]),
+            (threshold[item], min(screening[item], threshold[item])),
+            weights,
+            places,
+            energies,
+            found,
+        )
     return found
 
 
