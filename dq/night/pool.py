@@ -9,6 +9,7 @@ and the same command resumes.
 from __future__ import annotations
 
 import contextlib
+import logging
 import multiprocessing
 import os
 import signal
@@ -33,6 +34,8 @@ from dq.segments import Segments
 
 if TYPE_CHECKING:
     from dq.store import ChannelData
+
+log = logging.getLogger(__name__)
 
 #: Variables that hold the numerical libraries of a worker to one thread: the channels
 #: are the parallelism, and sums must not depend on a thread count.
@@ -121,6 +124,8 @@ def make_pool(jobs: int) -> Iterator[Executor]:
         as several, so the results are the same.
     """
     before = {name: os.environ.get(name) for name in _ONE_THREAD}
+    # when workers die, the pool's own thread may trip over the table of workers
+    hook, threading.excepthook = threading.excepthook, _log_thread_error
     os.environ.update(dict.fromkeys(_ONE_THREAD, "1"))
     pool = ProcessPoolExecutor(
         jobs,
@@ -131,17 +136,31 @@ def make_pool(jobs: int) -> Iterator[Executor]:
         yield pool
         pool.shutdown()
     except BaseException:
-        pool.shutdown(wait=False, cancel_futures=True)
-        for child in multiprocessing.active_children():
-            child.terminate()
-            child.join()
+        _end(pool)
         raise
     finally:
+        threading.excepthook = hook
         for name, value in before.items():
             if value is None:
                 os.environ.pop(name, None)
             else:
                 os.environ[name] = value
+
+
+def _end(pool: Executor) -> None:
+    """End the workers now, and wait for the thread that manages them.
+
+    Left to itself, the thread closes its pipe while the interpreter still writes to it
+    on the way out, and a traceback comes behind the one line that the user should read.
+    """
+    for child in multiprocessing.active_children():
+        child.terminate()
+        child.join()
+    pool.shutdown(wait=True, cancel_futures=True)
+
+
+def _log_thread_error(error: threading.ExceptHookArgs) -> None:
+    log.debug("thread %s: %s", error.thread, error.exc_value)
 
 
 @contextlib.contextmanager
