@@ -37,6 +37,7 @@ from dq.transients import (
     Marks,
     label_marks,
     place_runs,
+    sharpen_peaks,
     split_finished,
     summarise,
 )
@@ -102,6 +103,7 @@ class _ChannelRun:
         settings = config.conditioning
         self.plan = plan
         self.wanted = wanted
+        self.q_range = (config.tiles.q_min, config.tiles.q_max)
         self.threshold = 1.0 + 0.5 * config.transients.snr_threshold**2
         self.window = SampleWindow(data, ready)
         self.frames = FrameSpectra(
@@ -185,19 +187,29 @@ class _ChannelRun:
         return _Item(piece, begin, end, origin, spectrum, level, noise)
 
     def _marks(self, items: list[_Item], reference_ns: int) -> Marks:
+        tiles = self.plan.tiles
+        spectra = np.stack([i.spectrum for i in items])
+        level = np.stack([i.level for i in items])
+        origin = np.array([i.origin_ns for i in items])
         runs = tile_runs(
-            np.stack([i.spectrum for i in items]),
-            self.plan.tiles,
-            level=np.stack([i.level for i in items]),
-            start_s=np.array([(i.low_ns - i.origin_ns) / _NS for i in items]),
-            end_s=np.array([(i.high_ns - i.origin_ns) / _NS for i in items]),
+            spectra,
+            tiles,
+            level=level,
+            start_s=(np.array([i.low_ns for i in items]) - origin) / _NS,
+            end_s=(np.array([i.high_ns for i in items]) - origin) / _NS,
             threshold=self.threshold,
         )
-        return place_runs(
+        origin_s = (origin - reference_ns) / _NS
+        noise = np.stack([i.noise for i in items])
+        marks = place_runs(runs, tiles, origin_s=origin_s, noise=noise)
+        return sharpen_peaks(
+            marks,
             runs,
-            self.plan.tiles,
-            origin_s=np.array([(i.origin_ns - reference_ns) / _NS for i in items]),
-            noise=np.stack([i.noise for i in items]),
+            spectra,
+            tiles,
+            origin_s=origin_s,
+            level=level,
+            q_range=self.q_range,
         )
 
     def _collect(self, marks: Marks, start_ns: int, *, last: bool) -> None:

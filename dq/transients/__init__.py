@@ -8,5 +8,14 @@ from dq.transients.cluster import (
     summarise,
 )
 from dq.transients.place import place_runs
+from dq.transients.sharpen import sharpen_peaks
 
-__all__ = ["LINK", "Marks", "label_marks", "place_runs", "split_finished", "summarise"]
+__all__ = [
+    "LINK",
+    "Marks",
+    "label_marks",
+    "place_runs",
+    "sharpen_peaks",
+    "split_finished",
+    "summarise",
+]

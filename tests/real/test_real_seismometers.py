@@ -54,11 +54,14 @@ def test_the_other_stations_are_the_witnesses(night):
     witnesses = pd.read_csv(folder / "witnesses.csv").set_index("channel")
     assert set(witnesses.index) == {"BW.UH2.SHZ", "BW.UH3.SHZ", "BW.UH4.EHZ"}
     accepted = witnesses[witnesses.accepted == "yes"]
-    assert len(accepted) == 3
+    # four minutes leave the third station at a chance of about 0.08 over all trials:
+    # it is listed with that number and not used
+    assert set(accepted.index) == {"BW.UH2.SHZ", "BW.UH3.SHZ"}
     assert (accepted.p_value <= 0.05).all()
-    assert (accepted.significance > 2).all()
+    assert (witnesses.significance > 2).all()
+    assert (witnesses.coincidences > 3 * witnesses.expected).all()
     # nobody vouched for the stations: the association is statistical
-    assert (accepted.safety == "cannot tell").all()
+    assert (witnesses.safety == "cannot tell").all()
 
 
 def test_the_vetoes_cover_the_earthquakes(night):
