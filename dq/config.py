@@ -87,7 +87,7 @@ class Conditioning(_Section):
         default=4.0,
         ge=1.0,
         le=32.0,
-        description="s; Hann segment of the spectrum. 4 s resolves lines to 0.5 Hz "
+        description="s; tapered segment of the spectrum. 4 s resolves lines to 0.5 Hz "
         "and leaves 32 half-overlapped segments in a frame (own choice)",
     )
     spectrum_frame_s: float = Field(

@@ -2,7 +2,12 @@
 
 from dq.conditioning.faults import EqualRuns, classify, equal_runs
 from dq.conditioning.spectrum import combine_frames, median_mean, periodograms
-from dq.conditioning.whiten import Whitening, design_whitening, whitened_spectrum
+from dq.conditioning.whiten import (
+    Whitening,
+    design_whitening,
+    whitened_spectra,
+    whitened_spectrum,
+)
 
 __all__ = [
     "EqualRuns",
@@ -13,5 +18,6 @@ __all__ = [
     "equal_runs",
     "median_mean",
     "periodograms",
+    "whitened_spectra",
     "whitened_spectrum",
 ]

@@ -16,6 +16,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import scipy.fft
+from numba import njit
 
 
 def difference(values: np.ndarray) -> np.ndarray:
@@ -108,6 +109,55 @@ def hann_lag(lag: np.ndarray, half_length: int) -> np.ndarray:
     return 0.5 + 0.5 * np.cos(np.pi * lag / half_length)
 
 
+#: Items whose forward transforms go together: the FFT library works on four rows (two
+#: series, two filters) side by side at three quarters of the price of one by one.
+TOGETHER = 2
+
+
+def whitened_spectra(
+    parts: list[tuple[np.ndarray, int, Whitening]],
+    length: int,
+    *,
+    sample_rate: float,
+    out: np.ndarray | None = None,
+) -> np.ndarray:
+    """Transform and whiten the samples of several blocks.
+
+    Parameters
+    ----------
+    parts : list of (ndarray, int, Whitening)
+        Contiguous samples of each block, the position of the first one in the
+        transform, and the filter. Outside the samples the differenced series counts as
+        zero, and whatever lies within the settling time of their ends must not be
+        used.
+    length : int
+        Samples of the transform.
+    sample_rate : float
+        Hz.
+    out : ndarray of complex64, optional
+        Where the result goes; new by default.
+
+    Returns
+    -------
+    ndarray of complex64, shape (n_parts, length // 2 + 1)
+        Bins of mean square ``whitening.density`` in noise. Double precision until the
+        filter has been applied: differenced data span many decades.
+    """
+    if out is None:
+        out = np.empty((len(parts), length // 2 + 1), dtype=np.complex64)
+    scale = np.sqrt(2.0 / (sample_rate * length))
+    for first in range(0, len(parts), TOGETHER):
+        group = parts[first : first + TOGETHER]
+        rows = np.zeros((2 * len(group), length))
+        for k, (samples, offset, whitening) in enumerate(group):
+            rows[2 * k, offset + 1 : offset + len(samples) - 1] = difference(samples)
+            _place_taps(whitening.taps, rows[2 * k + 1])
+        bins = scipy.fft.rfft(rows, axis=1, workers=1)
+        for k in range(len(group)):
+            apply_filter(bins[2 * k], bins[2 * k + 1], scale, out[first + k])
+    return out
+
+
 def whitened_spectrum(
     samples: np.ndarray,
     offset: int,
@@ -116,35 +166,20 @@ def whitened_spectrum(
     *,
     sample_rate: float,
 ) -> np.ndarray:
-    """Transform and whiten the samples of one block.
-
-    Parameters
-    ----------
-    samples : ndarray, shape (n,)
-        Contiguous samples; outside them the differenced series counts as zero, and
-        whatever lies within the settling time of their ends must not be used.
-    offset : int
-        Position of the first sample in the transform.
-    length : int
-        Samples of the transform.
-
-    Returns
-    -------
-    ndarray of complex64, shape (length // 2 + 1,)
-        Bins of mean square ``whitening.density`` in noise.
-    """
-    series = np.zeros(length)
-    series[offset + 1 : offset + len(samples) - 1] = difference(samples)
-    spectrum = scipy.fft.rfft(series, workers=1)
-    response = filter_response(whitening.taps, length)
-    response *= np.sqrt(2.0 / (sample_rate * length))
-    return (spectrum * response).astype(np.complex64)
+    """Transform and whiten one block; see :func:`whitened_spectra`."""
+    part = (samples, offset, whitening)
+    return whitened_spectra([part], length, sample_rate=sample_rate)[0]
 
 
-def filter_response(taps: np.ndarray, length: int) -> np.ndarray:
-    """Give the real response of symmetric taps on the grid of a longer transform."""
+def _place_taps(taps: np.ndarray, row: np.ndarray) -> None:
+    """Lay symmetric taps around the start of a longer, periodic row of zeros."""
     half = len(taps) // 2
-    padded = np.zeros(length)
-    padded[:half] = taps[:half]
-    padded[length - (len(taps) - half) :] = taps[half:]
-    return scipy.fft.rfft(padded, workers=1).real
+    row[:half] = taps[:half]
+    row[len(row) - (len(taps) - half) :] = taps[half:]
+
+
+@njit(cache=True, nogil=True)
+def apply_filter(bins, response, scale, out):
+    """Multiply bins by the real part of a response and a scale, in single precision."""
+    for k in range(out.shape[0]):
+        out[k] = bins[k] * (response[k].real * scale)

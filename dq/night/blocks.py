@@ -7,9 +7,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from dq.conditioning.whiten import difference_response
+from dq.conditioning.whiten import TOGETHER, difference_response
 from dq.config import Config
 from dq.tiles import TilePlan, band_weights, plan_tiles
+from dq.tiles.plan import band_rows, settling_s
 
 _NS = 1_000_000_000
 
@@ -18,6 +19,10 @@ _NS = 1_000_000_000
 #: the cost of a row's calls among more. Samples per batch, and bounds on the blocks.
 BATCH_SAMPLES = 2**21
 BATCH_BLOCKS = (8, 32)
+
+#: Samples of a batch, its padding included, from which on the window moves in pairs of
+#: blocks (64 MiB of double precision; own choice).
+STEP_SAMPLES = 2**22
 
 #: Longest settling time of tile and filter at the ends of data, s. Longer tiles are
 #: left out of the plan: they would cost more unjudged time than they find (own choice).
@@ -48,6 +53,17 @@ class BlockPlan:
         """Length of a batch of blocks."""
         return self.batch * self.block_ns
 
+    @property
+    def step_ns(self) -> int:
+        """How far the window over the samples moves at a time.
+
+        All of a batch at once, but pairs of blocks where samples are many: the window
+        holds the spectrum's reach on top.
+        """
+        if self.batch * self.tiles.samples <= STEP_SAMPLES:
+            return self.batch_ns
+        return TOGETHER * self.block_ns
+
 
 def plan_blocks(rate, config: Config, f_low: float, f_high: float | None) -> BlockPlan:
     """Plan block, padding and tiles for a sample rate.
@@ -73,8 +89,8 @@ def plan_blocks(rate, config: Config, f_low: float, f_high: float | None) -> Blo
         "mismatch": tiles.mismatch,
         "max_settling_s": limit,
     }
-    probe = plan_tiles(fs, round(tiles.block_s * fs), **options)
-    pad = math.ceil(4 * (half / fs + probe.settling_s + 2 / fs)) / 4
+    q, frequency, _ = band_rows(fs, **options)
+    pad = math.ceil(4 * (half / fs + settling_s(q, frequency) + 2 / fs)) / 4
     for step in range(17):
         samples = round((tiles.block_s + 2 * (pad + step / 4)) * fs)
         if next_fast_len(samples, real=True) == samples:

@@ -4,7 +4,13 @@ from __future__ import annotations
 
 import numpy as np
 
-from dq.conditioning.spectrum import combine_frames, median_mean, periodograms
+from dq.conditioning.disturbed import undisturbed
+from dq.conditioning.spectrum import (
+    CORRELATED,
+    combine_frames,
+    median_mean,
+    periodograms,
+)
 from dq.conditioning.whiten import difference
 from dq.night.stream import Piece
 from dq.segments import Segments
@@ -98,7 +104,10 @@ class FrameSpectra:
             return None
         # numbers count on from GPS 0, so that parity does not depend on the frame
         parity = (number + frame * per_frame) % 2
-        return median_mean(power[good], parity[good]), int(np.count_nonzero(good))
+        if not good.all():
+            power, parity = power[good], parity[good]
+        used = undisturbed(power, correlated=CORRELATED)
+        return median_mean(power, parity, used), len(power)
 
     def _good(self, starts_ns: np.ndarray, bad: Segments) -> np.ndarray:
         if not bad:

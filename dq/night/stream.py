@@ -58,10 +58,18 @@ class SampleWindow:
         self._read_to: int | None = None
         self.pieces: list[Piece] = []
 
-    def move(self, start_ns: int, end_ns: int) -> None:
-        """Drop what ends before ``start_ns`` and read up to ``end_ns``."""
-        begin = start_ns if self._read_to is None else max(self._read_to, start_ns)
-        self._drop_before(start_ns)
+    def move(self, start_ns: int, end_ns: int, keep_ns: int | None = None) -> None:
+        """Drop what ends before ``keep_ns`` and read from ``start_ns`` to ``end_ns``.
+
+        What was read before is not read again; ``keep_ns`` may lie after ``start_ns``
+        where older samples have served their purpose.
+        """
+        begin = start_ns
+        if self._read_to is not None and self._read_to > start_ns:
+            begin = self._read_to
+            self._drop_before(max(start_ns, keep_ns or start_ns))
+        else:
+            self._drop_before(start_ns)
         for low, high in self._ready.clip(begin, max(end_ns, begin)):
             for series in self._data.read(low, high):
                 self._append(Piece(series.start_ns, series.rate, series.values))

@@ -14,6 +14,15 @@ CHUNK = 64
 
 
 @njit(cache=True, fastmath=True, nogil=True)
+def fill_window(start, step, scale, out):
+    """Fill ``out`` with scale (1 - x^2)^2 at x = start, start + step, ...; |x| < 1."""
+    for k in range(out.shape[0]):
+        x = start + step * k
+        rest = max(1.0 - x * x, 0.0)
+        out[k] = scale * rest * rest
+
+
+@njit(cache=True, fastmath=True, nogil=True)
 def apply_window(spectra, first, window, out):
     """Put a row's part of each spectrum under its window, its middle at zero frequency.
 

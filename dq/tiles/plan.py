@@ -20,6 +20,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from dq.errors import PlanError
+from dq.tiles.kernels import fill_window
 
 #: A Q below this would need negative frequencies in the window (sqrt(11)).
 Q_MIN = math.sqrt(11.0)
@@ -135,8 +136,10 @@ class TilePlan:
         Tiles of the row that are transformed, a product of small primes.
     first_bin : ndarray of int, shape (n_rows,)
         First spectrum bin of the row's window.
-    windows : tuple of ndarray (float32)
-        Window of each row over its bins, unit energy: its squares add up to 1.
+    width : ndarray of int, shape (n_rows,)
+        Bins of the row's window.
+    scale : ndarray, shape (n_rows,)
+        Height of the row's window: its squares add up to 1.
     """
 
     sample_rate: float
@@ -147,7 +150,20 @@ class TilePlan:
     plane: np.ndarray
     coarse: np.ndarray
     first_bin: np.ndarray
-    windows: tuple[np.ndarray, ...]
+    width: np.ndarray
+    scale: np.ndarray
+
+    def window(self, row: int) -> np.ndarray:
+        """Give a row's window over its bins, float32.
+
+        Windows are made when they are used: at 16 kHz all of them would take 40 MiB.
+        """
+        out = np.empty(self.width[row], dtype=np.float32)
+        q, f = self.q[row], self.frequency[row]
+        start = (self.first_bin[row] / self.length_s - f) * q / (Q_MIN * f)
+        step = q / (self.length_s * Q_MIN * f)
+        fill_window(start, step, self.scale[row], out)
+        return out
 
     @property
     def tiles(self) -> np.ndarray:
@@ -182,7 +198,12 @@ class TilePlan:
     @property
     def settling_s(self) -> float:
         """Time that the longest tile needs on either side, s."""
-        return SETTLING_SIGMAS * float(np.max(self.sigma_t))
+        return settling_s(self.q, self.frequency)
+
+
+def settling_s(q: np.ndarray, frequency: np.ndarray) -> float:
+    """Give the time that the longest tile of some rows needs on either side, s."""
+    return SETTLING_SIGMAS * float(np.max(q / (4.0 * np.pi * frequency)))
 
 
 def band_rows(
@@ -281,14 +302,13 @@ def plan_tiles(
     first = np.floor((frequency - half_width) * length).astype(np.int64) + 1
     last = np.ceil((frequency + half_width) * length).astype(np.int64)
     first, last = np.maximum(first, 1), np.minimum(last, samples // 2)
-    windows, coarse = [], []
+    width, scale, coarse = last - first, np.empty(len(q)), []
     for k in range(len(q)):
         bins = np.arange(first[k], last[k]) / length
         window = bisquare((bins - frequency[k]) / half_width[k])
-        window /= math.sqrt(np.sum(window**2))
-        windows.append(window.astype(np.float32))
+        scale[k] = 1.0 / math.sqrt(np.sum(window**2))
         tiles = tiles_in_row(q[k], frequency[k], length, mismatch)
-        need = max(math.ceil(tiles / 2), math.ceil(OVERSAMPLING * len(bins)))
+        need = max(math.ceil(tiles / 2), math.ceil(OVERSAMPLING * width[k]))
         coarse.append(next_fast_len(need))
     return TilePlan(
         sample_rate=sample_rate,
@@ -299,7 +319,8 @@ def plan_tiles(
         plane=plane,
         coarse=np.array(coarse),
         first_bin=first,
-        windows=tuple(windows),
+        width=width,
+        scale=scale,
     )
 
 

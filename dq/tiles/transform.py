@@ -83,7 +83,7 @@ def row_coefficients(spectra: np.ndarray, plan: TilePlan, row: int) -> np.ndarra
 def _transform(spectra, plan: TilePlan, row: int, n_tiles: int, work) -> np.ndarray:
     buffer = work[: len(spectra) * n_tiles].reshape(len(spectra), n_tiles)
     parts, out = spectra.view(np.float32), buffer.view(np.float32)
-    apply_window(parts, plan.first_bin[row], plan.windows[row], out)
+    apply_window(parts, plan.first_bin[row], plan.window(row), out)
     return scipy.fft.ifft(buffer, axis=1, norm="forward", overwrite_x=True, workers=1)
 
 

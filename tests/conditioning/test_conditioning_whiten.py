@@ -175,8 +175,8 @@ def test_single_precision_after_whitening_costs_nothing(rng):
     row = len(plan.q) // 2
     single = row_coefficients(spectrum[None], plan, row)[0]
     window = np.zeros(plan.tiles[row], complex)
-    part = spectrum[plan.first_bin[row] :][: len(plan.windows[row])]
-    window[: len(part)] = part.astype(complex) * plan.windows[row]
+    part = spectrum[plan.first_bin[row] :][: len(plan.window(row))]
+    window[: len(part)] = part.astype(complex) * plan.window(row)
     double = np.fft.ifft(window, norm="forward")
     core = slice(len(double) // 10, -len(double) // 10)
     error = np.abs(np.abs(single) ** 2 - np.abs(double) ** 2)[core]

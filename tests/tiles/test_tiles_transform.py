@@ -175,7 +175,7 @@ def test_midpoints_are_the_tiles_of_the_whole_row(plan, rng):
     for row in range(0, len(plan.q), 7):
         whole = row_coefficients(spectra, plan, row)[0]
         coarse, between = whole[::2], whole[1::2]
-        width = len(plan.windows[row])
+        width = len(plan.window(row))
         if width < 40:
             continue
         weights = midpoint_weights()
