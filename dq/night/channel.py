@@ -13,11 +13,6 @@ from dataclasses import dataclass, field
 import numpy as np
 import pandas as pd
 
-from dq.conditioning.whiten import (
-    Whitening,
-    design_whitening,
-    whitened_spectrum,
-)
 from dq.config import Config
 from dq.errors import ChannelError, NoDataError
 from dq.night.blocks import (
@@ -26,9 +21,8 @@ from dq.night.blocks import (
     default_low_edge,
     plan_blocks,
 )
-from dq.night.fault_log import FaultLog
-from dq.night.spectra import FrameSpectra
-from dq.night.stream import Piece, SampleWindow
+from dq.night.stream import Piece
+from dq.night.whitened import WhitenedBlocks
 from dq.segments import Segments
 from dq.tables import TRANSIENTS, conform
 from dq.tiles import tile_runs
@@ -100,38 +94,23 @@ class _ChannelRun:
     """The batch loop over one channel; see :func:`analyse_channel`."""
 
     def __init__(self, data, plan: BlockPlan, config: Config, ready, wanted):
-        settings = config.conditioning
         self.plan = plan
         self.wanted = wanted
         self.q_range = (config.tiles.q_min, config.tiles.q_max)
         self.threshold = 1.0 + 0.5 * config.transients.snr_threshold**2
-        self.window = SampleWindow(data, ready)
-        self.frames = FrameSpectra(
-            rate=data.rate,
-            segment=plan.segment,
-            hop=plan.segment // 2,
-            frame_ns=round(settings.spectrum_frame_s * _NS),
-            span_ns=round(settings.spectrum_span_s * _NS),
-        )
-        self.faults = FaultLog()
+        self.blocks = WhitenedBlocks(data, plan, config, ready)
+        self.faults = self.blocks.faults
         self.finite: list[tuple[int, int]] = []
         self.analysed: list[tuple[int, int]] = []
         self.tables: list[dict] = []
         self.pending = Marks.none()
         self.cut = False
-        segment_ns = round(plan.segment / plan.rate * _NS)
-        reach = self.frames.span_ns + self.frames.frame_ns + segment_ns
-        self.context_ns = max(reach, plan.pad_ns + segment_ns)
 
     def batch(self, start_ns: int, *, last: bool) -> None:
         """Analyse the blocks of the batch that starts at ``start_ns``."""
         plan = self.plan
-        end_ns = start_ns + plan.batch_ns
-        self.window.move(start_ns - self.context_ns, end_ns + self.context_ns)
-        pieces = self.window.pieces
-        bad = self.faults.examine(pieces)
-        self.finite += [(p.start_ns, p.end_ns) for p in pieces]
-        self.frames.update(pieces, start_ns, end_ns, bad)
+        self.blocks.move(start_ns, start_ns + plan.batch_ns)
+        self.finite += [(p.start_ns, p.end_ns) for p in self.blocks.pieces]
         items = []
         for block in range(plan.batch):
             items += self._items(start_ns + block * plan.block_ns)
@@ -143,46 +122,22 @@ class _ChannelRun:
     def _items(self, block_ns: int) -> list[_Item]:
         plan, items = self.plan, []
         whitening = None
-        for piece in self.window.pieces:
+        for piece in self.blocks.pieces:
             low = max(block_ns, piece.start_ns + plan.pad_ns)
             high = min(block_ns + plan.block_ns, piece.end_ns - plan.pad_ns)
             for begin, end in self.wanted.clip(low, max(high, low)):
                 if whitening is None:
-                    whitening = self._whitening(block_ns)
+                    whitening = self.blocks.whitening(block_ns)
                 if whitening is None:
                     return []
                 items.append(self._item(piece, block_ns, begin, end, whitening))
         return items
 
-    def _whitening(self, block_ns: int) -> Whitening | None:
+    def _item(self, piece, block_ns, begin, end, whitening) -> _Item:
         plan = self.plan
-        found = self.frames.around(block_ns, block_ns + plan.block_ns)
-        if found is None:
-            return None
-        return design_whitening(
-            found,
-            sample_rate=plan.rate,
-            segment=plan.segment,
-            half_length=plan.half_length,
-            edge_hz=plan.tiles.f_low,
-        )
-
-    def _item(self, piece, block_ns, begin, end, whitening: Whitening) -> _Item:
-        plan, samples = self.plan, self.plan.tiles.samples
-        index = piece.index_from(block_ns - plan.pad_ns)
-        first = max(index, 0)
-        spectrum = whitened_spectrum(
-            piece.values[first : index + samples],
-            first - index,
-            samples,
-            whitening,
-            sample_rate=plan.rate,
-        )
+        origin, spectrum = self.blocks.transform(piece, block_ns, whitening)
         level = plan.weights @ whitening.density
         noise = 1.0 / (plan.weights @ whitening.gain)
-        # pieces know their start to the nanosecond; samples usually lie on rounder
-        # times, and the origin must not depend on where reading began
-        origin = 10 * round(piece.time_ns(index) / 10)
         self.analysed.append((begin, end))
         return _Item(piece, begin, end, origin, spectrum, level, noise)
 
