@@ -45,11 +45,12 @@ def measure_comb(scene: Scene, *, mains_hz: float) -> dict[str, np.ndarray]:
     f_all = np.arange(scene.power.shape[1])[:ceiling] * step
     band = (f_all >= scene.low_hz[:, None]) & (f_all <= scene.high_hz[:, None])
     whole = np.where(band, scene.power[:, :ceiling] - 1.0, 0.0).sum(axis=1)
-    member = np.zeros((bins, TEETH))
-    member[on, number[on] - 1] = 1.0
-    teeth = np.maximum(excess @ member, 0.0)
+    teeth = np.zeros((scene.count, TEETH))
+    for k in range(TEETH):
+        teeth[:, k] = excess[:, on & (number == k + 1)].sum(axis=1)
+    teeth = np.maximum(teeth, 0.0)
     sums = teeth.sum(axis=1)
-    gaps = np.maximum(excess @ off.astype(float), 0.0)
+    gaps = np.maximum(excess[:, off].sum(axis=1), 0.0)
     density_on = ratio(sums, (inside * on).sum(axis=1).astype(float))
     density_off = ratio(gaps, (inside * off).sum(axis=1).astype(float))
     floor = np.maximum(0.1 * teeth.max(axis=1), 6.0)[:, None]
