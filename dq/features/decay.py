@@ -30,8 +30,8 @@ FEATURES = group_of(
         "pi f times the e-fold time; 0 where the energy does not fall",
         "ringdown h ~ exp(-pi f t / Q), textbook",
     ),
-    ("decay_fit", "1", "minus the correlation of ln energy with time after the peak"),
     ("attack_q", "1", "the same Q fitted to the rise before the peak"),
+    ("decay_balance", "1", "(decay - attack) / (decay + attack), e-fold times"),
 )
 
 
@@ -41,8 +41,7 @@ def measure_decay(scene: Scene) -> dict[str, np.ndarray]:
     duration = t[:, 4] - t[:, 0]
     peak = tiles.time[scene.peak]
     frequency = tiles.frequency[scene.peak]
-    after, fit = _slope(scene, after=True)
-    before, _ = _slope(scene, after=False)
+    after, before = _slope(scene, after=True), _slope(scene, after=False)
     # energy falls as exp(-2 t / tau)
     tau = np.minimum(2.0 * ratio(np.ones(len(after)), -after), _longest(frequency))
     attack = np.minimum(2.0 * ratio(np.ones(len(before)), before), _longest(frequency))
@@ -54,8 +53,8 @@ def measure_decay(scene: Scene) -> dict[str, np.ndarray]:
         "peak_place": np.clip(ratio(peak - t[:, 0], duration, 0.5), 0.0, 1.0),
         "decay_s": tau,
         "decay_q": np.pi * frequency * tau,
-        "decay_fit": -fit,
         "attack_q": np.pi * frequency * attack,
+        "decay_balance": ratio(tau - attack, tau + attack),
     }
 
 
@@ -71,11 +70,11 @@ def _slope(scene: Scene, *, after: bool):
     offset = offset if after else -offset
     same = (tiles.frequency == tiles.frequency[top]) & (tiles.plane == tiles.plane[top])
     used = same & (offset >= 0.8 * tiles.sigma_t)
-    slope, correlation = line_fit(
+    slope, _ = line_fit(
         tiles.item[used],
         tiles.time[used],
         np.log(tiles.energy[used]),
         tiles.energy[used],
         scene.count,
     )
-    return slope, correlation
+    return slope

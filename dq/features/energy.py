@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
-from dq.features.grouped import entropy, moments, ratio, total
+from dq.features.grouped import entropy, moments, ratio
 from dq.features.scene import Scene
 from dq.features.spec import group_of
 
@@ -36,14 +36,9 @@ FEATURES = group_of(
 def measure_energy(scene: Scene) -> dict[str, np.ndarray]:
     """Measure the group; see ``FEATURES``."""
     tiles, n = scene.tiles, scene.count
-    start, span = scene.times[:, 0], scene.times[:, 4] - scene.times[:, 0]
-    place = ratio(tiles.time - start[tiles.item], span[tiles.item], 0.5)
-    column = np.clip((place * TIME_BINS).astype(int), 0, TIME_BINS - 1)
     line = (np.log2(tiles.frequency) / OCTAVE_BIN).astype(int)
     line = np.clip(line, 0, OCTAVE_BINS - 1)
-    cell = (tiles.item * TIME_BINS + column) * OCTAVE_BINS + line
-    shares = total(cell, tiles.weight, n * TIME_BINS * OCTAVE_BINS)
-    shares = shares.reshape(n, TIME_BINS, OCTAVE_BINS)
+    shares = scene.grid(TIME_BINS, line, OCTAVE_BINS)
     _, _, skewness, kurtosis = moments(tiles.item, tiles.time, tiles.weight, n)
     top = tiles.energy[scene.peak]
     energy = scene.total(tiles.weight)
@@ -52,7 +47,7 @@ def measure_energy(scene: Scene) -> dict[str, np.ndarray]:
     return {
         "time_skewness": skewness,
         "time_kurtosis": kurtosis,
-        "time_entropy": entropy(shares.sum(axis=2)),
+        "time_entropy": entropy(shares.sum(axis=1)),
         "map_entropy": entropy(shares.reshape(n, -1)),
         "peak_share": ratio(scene.total(tiles.weight * half), energy),
         "effective_cells": energy / np.maximum(top - 1.0, 0.1),

@@ -100,12 +100,7 @@ def _chirp(scene: Scene) -> dict[str, np.ndarray]:
 
 def _symmetry(scene: Scene) -> np.ndarray:
     """Compare the map with itself reversed about the middle of its duration."""
-    tiles, n, k = scene.tiles, scene.count, MIRROR_BINS
-    start, span = scene.times[:, 0], scene.times[:, 4] - scene.times[:, 0]
-    place = ratio(tiles.time - start[tiles.item], span[tiles.item], 0.5)
-    column = np.clip((place * k).astype(int), 0, k - 1)
-    line = np.clip(np.log2(tiles.frequency).astype(int), 0, 15)
-    cell = (tiles.item * 16 + line) * k + column
-    grid = total(cell, tiles.weight, n * 16 * k).reshape(n, 16, k)
+    line = np.clip(np.log2(scene.tiles.frequency).astype(int), 0, 15)
+    grid = scene.grid(MIRROR_BINS, line, 16)
     common = np.minimum(grid, grid[:, :, ::-1]).sum(axis=(1, 2))
     return common / grid.sum(axis=(1, 2))

@@ -35,6 +35,9 @@ FLOOR = 5.0
 TIME_MARGIN = 0.1
 BAND_MARGIN = 1.2
 
+#: The band of lines and samples goes this far beyond 5 and 95 % of the energy, octaves.
+BAND_SLACK = 0.35
+
 #: Shoulders and least flat part of the window under which lines are measured, s: they
 #: resolve 4 Hz for the shortest transient.
 SHOULDER_S = 0.1
@@ -90,7 +93,7 @@ class Scene:
         Spectrum of the windowed samples over the noise's mean (1), bins of
         ``1 / length_s`` Hz.
     low_hz, high_hz : ndarray, shape (count,)
-        Band within which tiles and lines were sought.
+        Band of the energy, within which lines and samples are looked at.
     samples : ndarray of float32, shape (count, n_samples)
         The windowed samples within that band.
     flat_s, extent_s : ndarray, shape (count,)
@@ -114,6 +117,34 @@ class Scene:
     def total(self, values: np.ndarray) -> np.ndarray:
         """Sum over each transient's tiles."""
         return total(self.tiles.item, values, self.count)
+
+    def columns(self, bins: int) -> tuple[np.ndarray, np.ndarray]:
+        """Give the first and last time bin of each tile, sigma_t on both sides.
+
+        The bins share the time between 5 and 95 % of the energy; what lies outside
+        counts to the first or last one.
+        """
+        start = self.times[self.tiles.item, 0]
+        span = np.maximum(self.times[self.tiles.item, -1] - start, 1e-4)
+        place = (self.tiles.time - start) / span * bins
+        reach = self.tiles.sigma_t / span * bins
+        first = np.clip(np.floor(place - reach).astype(int), 0, bins - 1)
+        return first, np.clip(np.floor(place + reach).astype(int), 0, bins - 1)
+
+    def grid(self, bins: int, line: np.ndarray, lines: int) -> np.ndarray:
+        """Spread the tiles' energy over time bins and given frequency lines.
+
+        Returns
+        -------
+        ndarray, shape (count, lines, bins)
+        """
+        first, last = self.columns(bins)
+        base = (self.tiles.item * lines + line) * (bins + 1)
+        share = self.tiles.weight / (last - first + 1)
+        size = self.count * lines * (bins + 1)
+        steps = total(base + first, share, size) - total(base + last + 1, share, size)
+        steps = steps.reshape(self.count, lines, bins + 1)
+        return np.maximum(np.cumsum(steps, axis=2)[:, :, :-1], 0.0)
 
 
 #: Levels of ``Scene.times`` and ``Scene.octaves``.
@@ -174,6 +205,9 @@ def make_scene(snippets: list[Snippet], *, f_low_hz: float = MAP_LOW_HZ) -> Scen
         weighted_quantiles(tiles.item, key, tiles.weight, count, LEVELS)
         for key in (tiles.time, np.log2(tiles.frequency))
     )
+    # shares of the energy say where the band ends; the table's own edges widen with SNR
+    low = np.exp2(octaves[:, 0] - BAND_SLACK)
+    high = np.minimum(np.exp2(octaves[:, -1] + BAND_SLACK), 0.5 * rate)
     power, inside = _windowed(values, times, low, high, rate)
     return Scene(
         count=count,
@@ -185,7 +219,7 @@ def make_scene(snippets: list[Snippet], *, f_low_hz: float = MAP_LOW_HZ) -> Scen
         octaves=octaves,
         power=power,
         low_hz=low,
-        high_hz=np.minimum(high, 0.5 * rate),
+        high_hz=high,
         samples=inside,
         flat_s=flat,
         extent_s=end - start,

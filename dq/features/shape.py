@@ -43,14 +43,8 @@ def measure_shape(scene: Scene) -> dict[str, np.ndarray]:
 
 def _blobs(scene: Scene) -> dict[str, np.ndarray]:
     tiles, n = scene.tiles, scene.count
-    start = scene.times[:, 0]
-    span = np.maximum(scene.times[:, 4] - start, 1e-4)
     # each tile covers sigma_t on both sides, so that the gaps of a row close
-    place = tiles.time - start[tiles.item]
-    first, last = (
-        np.clip((p / span[tiles.item] * BLOB_COLUMNS).astype(int), 0, BLOB_COLUMNS - 1)
-        for p in (place - tiles.sigma_t, place + tiles.sigma_t)
-    )
+    first, last = scene.columns(BLOB_COLUMNS)
     middle = (first + last) // 2
     line = (np.log2(tiles.frequency) / BLOB_OCTAVES).astype(int)
     base = tiles.item * BLOB_LINES + np.clip(line, 0, BLOB_LINES - 1)

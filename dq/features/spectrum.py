@@ -27,7 +27,7 @@ FEATURES = group_of(
     ("spectral_skewness", "1", "skewness of the energy over log2 f"),
     ("spectral_kurtosis", "1", "excess kurtosis of the energy over log2 f"),
     ("spectral_entropy", "1", "entropy over third-octave bins", "Shannon 1948"),
-    ("band_balance", "1", "(high - low) / all, energy beside the peak frequency"),
+    ("band_balance", "1", "(high - low) / all, energy beside the middle of the band"),
     ("low_share", "1", "share of the energy below 100 Hz"),
     ("line_frequency_hz", "Hz", "frequency of the strongest bin of the line spectrum"),
     ("line_share", "1", "share of the in-band power within 2 Hz of one frequency"),
@@ -45,7 +45,10 @@ def measure_spectrum(scene: Scene) -> dict[str, np.ndarray]:
     shares = total(tiles.item * OCTAVE_BINS + line, tiles.weight, n * OCTAVE_BINS)
     peak = tiles.frequency[scene.peak]
     energy = scene.total(tiles.weight)
-    beside = np.sign(tiles.frequency - peak[tiles.item])
+    middle = 0.5 * (scene.octaves[:, 0] + scene.octaves[:, -1])
+    # a soft step, so that no single tile at the middle decides
+    width = np.maximum(0.25 * (scene.octaves[:, -1] - scene.octaves[:, 0]), 0.1)
+    beside = np.tanh((octave - middle[tiles.item]) / width[tiles.item])
     return {
         "peak_frequency_hz": peak,
         "centroid_hz": np.exp2(mean),
