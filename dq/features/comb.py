@@ -13,6 +13,9 @@ from dq.features.spec import group_of
 TEETH = 12
 TOOTH_HALF_HZ = 5.0
 
+#: Weak teeth are looked for this far beyond 5 and 95 % of the energy, octaves.
+SLACK_OCTAVES = 1.5
+
 FEATURES = group_of(
     "comb",
     ("comb_strength", "1", "share of the in-band power at the mains harmonics"),
@@ -39,11 +42,13 @@ def measure_comb(scene: Scene, *, mains_hz: float) -> dict[str, np.ndarray]:
     distance = np.abs(f - number * mains_hz)
     on = (distance <= TOOTH_HALF_HZ) & (number >= 1) & (number <= TEETH)
     off = (np.abs(distance - 0.5 * mains_hz) <= TOOTH_HALF_HZ) & (f > TOOTH_HALF_HZ)
-    inside = (f >= scene.low_hz[:, None]) & (f <= scene.high_hz[:, None])
+    low = np.exp2(scene.octaves[:, :1] - SLACK_OCTAVES)
+    high = np.exp2(scene.octaves[:, -1:] + SLACK_OCTAVES)
+    inside = (f >= low) & (f <= high)
     excess = np.where(inside, scene.power[:, :bins] - 1.0, 0.0).astype(np.float64)
-    ceiling = int(np.ceil(scene.high_hz.max() / step)) + 1
+    ceiling = int(np.ceil(high.max() / step)) + 1
     f_all = np.arange(scene.power.shape[1])[:ceiling] * step
-    band = (f_all >= scene.low_hz[:, None]) & (f_all <= scene.high_hz[:, None])
+    band = (f_all >= low) & (f_all <= high)
     whole = np.where(band, scene.power[:, :ceiling] - 1.0, 0.0).sum(axis=1)
     teeth = np.zeros((scene.count, TEETH))
     for k in range(TEETH):

@@ -59,7 +59,7 @@ def measure_energy(scene: Scene) -> dict[str, np.ndarray]:
 def _loudest(scene: Scene, plane: int) -> np.ndarray:
     """Give the loudest energy in one plane, at least a quarter of the peak."""
     tiles = scene.tiles
-    out = 0.2 * tiles.energy[scene.peak]
+    out = np.maximum(0.2 * tiles.energy[scene.peak], 1e-9)
     inside = tiles.plane == plane
     np.maximum.at(out, tiles.item[inside], tiles.energy[inside])
     return out
