@@ -36,7 +36,7 @@ TIME_MARGIN = 0.1
 BAND_MARGIN = 1.2
 
 #: The band of lines and samples goes this far beyond 5 and 95 % of the energy, octaves.
-BAND_SLACK = 0.35
+BAND_SLACK = 0.8
 
 #: Shoulders and least flat part of the window under which lines are measured, s: they
 #: resolve 4 Hz for the shortest transient.

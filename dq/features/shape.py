@@ -23,7 +23,7 @@ FEATURES = group_of(
     ("blob_count", "1", "separate parts of the map with 5 % of the energy"),
     ("largest_blob", "1", "share of the energy in the largest part"),
     ("polarity", "1", "(highest + lowest) / (highest - lowest) sample"),
-    ("step", "1", "|sum| / sum of moduli of the samples: 1 for one half-wave"),
+    ("step", "1", "largest running sum over the sum of moduli: few half-waves, large"),
     ("crest", "1", "largest modulus over the root mean square of the core"),
     ("half_cycles", "1", "sign changes where the envelope exceeds half its peak"),
     ("flat_share", "1", "share of the transient in repeating samples (saturation)"),
@@ -82,12 +82,13 @@ def _samples(scene: Scene) -> dict[str, np.ndarray]:
     x = np.where(core, x, 0.0)
     top, bottom = x.max(axis=1), x.min(axis=1)
     modulus = np.abs(x)
+    running = np.cumsum(x, axis=1)
     length = np.maximum(core.sum(axis=1), 1)
     rms = np.sqrt(np.square(x).sum(axis=1) / length)
     loudest = modulus.max(axis=1)
     return {
         "polarity": ratio(top + bottom, top - bottom),
-        "step": ratio(np.abs(x.sum(axis=1)), modulus.sum(axis=1)),
+        "step": ratio(np.abs(running).max(axis=1), modulus.sum(axis=1)),
         "crest": ratio(loudest, rms),
         "half_cycles": _half_cycles(x, modulus, loudest),
     }

@@ -35,7 +35,7 @@ FEATURES_FILE = "strain_features.csv"
 #: Columns of ``strain_features.csv``.
 FEATURE_COLUMNS: tuple[Column, ...] = (
     Column("transient_id", "text", meaning="stable name of the transient"),
-    *(Column(f.name, "float", f.unit, "%.9g", f.meaning) for f in FEATURES),
+    *(Column(f.name, "float", f.unit, "%.6g", f.meaning) for f in FEATURES),
 )
 
 _FAMILY = ("family", "probability", "family_set", "novelty")

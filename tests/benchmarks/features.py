@@ -58,24 +58,24 @@ def stability(tables: list[pd.DataFrame], families: np.ndarray) -> pd.DataFrame:
     Returns
     -------
     pandas.DataFrame
-        ``move`` (mean rank difference of the same waveform at the lowest and the
-        highest level), ``apart`` (mean rank difference of waveforms of different
-        families) and ``ratio``, indexed by feature.
+        Indexed by feature: ``drift`` (mean rank difference from the lowest to the
+        highest level), ``move`` (mean of its modulus), ``apart`` (mean rank difference
+        of waveforms of different families) and ``ratio`` of the latter two.
     """
     known = ~np.any([t.isna().any(axis=1) for t in tables], axis=0)
-    names = families[known]
+    who = np.tile(families[known], len(tables))
+    other = who[:, None] != who[None, :]
     rows = {}
     for feature in NAMES:
         values = [t[feature].to_numpy()[known] for t in tables]
         ranks = rankdata(np.concatenate(values)).reshape(len(tables), -1)
         ranks /= ranks.size
-        move = np.abs(ranks[-1] - ranks[0]).mean()
+        step = ranks[-1] - ranks[0]
         every = np.concatenate(ranks)
-        who = np.tile(names, len(tables))
-        other = who[:, None] != who[None, :]
         apart = np.abs(every[:, None] - every[None, :])[other].mean()
-        rows[feature] = (move, apart, move / apart if apart > 0 else 0.0)
-    columns = ["move", "apart", "ratio"]
+        move = np.abs(step).mean()
+        rows[feature] = (step.mean(), move, apart, move / apart if apart > 0 else 0.0)
+    columns = ["drift", "move", "apart", "ratio"]
     return pd.DataFrame.from_dict(rows, orient="index", columns=columns)
 
 
