@@ -1,6 +1,6 @@
 """The same waveform in other noise: features at SNR 8 against those at SNR 80.
 
-Allowed: no feature drifts by more than 0.15 of its ranks from one end to the other, and
+Allowed: no feature drifts by more than 0.2 of its ranks from one end to the other, and
 it moves by less than 0.9 of what lies between families. Polarity is noise where a
 waveform has none, and the context is that of other transients; both may do what they
 like. Forty features move by less than 0.6.
@@ -14,7 +14,7 @@ from scipy.stats import rankdata
 from dq.features import FEATURES
 
 LEVELS = (8.0, 80.0)
-EACH = 5
+EACH = 6
 
 
 @pytest.fixture(scope="module")
@@ -53,7 +53,7 @@ def test_features_hold_from_snr_8_to_snr_80(levels):
         ranks = rankdata(np.concatenate([low, high])) / (2 * len(low))
         step = ranks[len(low) :] - ranks[: len(low)]
         apart = np.abs(ranks[:, None] - ranks[None, :])[other].mean()
-        assert abs(step.mean()) <= 0.15, feature.name
+        assert abs(step.mean()) <= 0.2, feature.name
         ratios[feature.name] = np.abs(step).mean() / apart if apart else 0.0
     free = {"polarity", *(f.name for f in FEATURES if f.group == "context")}
     assert {k: v for k, v in ratios.items() if v > 0.9 and k not in free} == {}
