@@ -21,7 +21,7 @@ BLOB_SHARE = 0.05
 FEATURES = group_of(
     "shape",
     ("blob_count", "1", "separate parts of the map with 5 % of the energy"),
-    ("largest_blob", "1", "share of the energy in the largest part"),
+    ("largest_blob", "1", "share of these parts' energy in the largest one"),
     ("polarity", "1", "(highest + lowest) / (highest - lowest) sample"),
     ("step", "1", "largest running sum over the sum of moduli: few half-waves, large"),
     ("crest", "1", "largest modulus over the root mean square of the core"),
@@ -43,17 +43,20 @@ def measure_shape(scene: Scene) -> dict[str, np.ndarray]:
 
 def _blobs(scene: Scene) -> dict[str, np.ndarray]:
     tiles, n = scene.tiles, scene.count
-    # each tile covers sigma_t on both sides, so that the gaps of a row close
+    # each tile covers its standard deviations on both sides, so that gaps between
+    # neighbouring tiles and rows close
     first, last = scene.columns(BLOB_COLUMNS)
-    middle = (first + last) // 2
-    line = (np.log2(tiles.frequency) / BLOB_OCTAVES).astype(int)
-    base = tiles.item * BLOB_LINES + np.clip(line, 0, BLOB_LINES - 1)
+    sigma_f = 1.0 / (4.0 * np.pi * tiles.sigma_t)
     shape = (n, BLOB_LINES, BLOB_COLUMNS + 1)
-    size, width = n * BLOB_LINES * (BLOB_COLUMNS + 1), BLOB_COLUMNS + 1
-    cover = total(base * width + first, np.ones(len(base)), size)
-    cover -= total(base * width + last + 1, np.ones(len(base)), size)
+    cover = np.zeros(np.prod(shape))
+    for offset in (-1.0, 0.0, 1.0):
+        row = tiles.item * BLOB_LINES + _line(tiles.frequency + offset * sigma_f)
+        cover += total(row * shape[2] + first, np.ones(len(row)), len(cover))
+        cover -= total(row * shape[2] + last + 1, np.ones(len(row)), len(cover))
     filled = np.cumsum(cover.reshape(shape), axis=2)[:, :, :-1] > 0.5
-    energy = total(base * width + middle, tiles.weight, size).reshape(shape)
+    row = tiles.item * BLOB_LINES + _line(tiles.frequency)
+    middle = row * shape[2] + (first + last) // 2
+    energy = total(middle, tiles.weight, len(cover)).reshape(shape)
     # parts touch in time, frequency or across a corner, never between transients
     touch = np.zeros((3, 3, 3), dtype=bool)
     touch[1] = True
@@ -63,12 +66,19 @@ def _blobs(scene: Scene) -> dict[str, np.ndarray]:
     owner = np.zeros(parts, dtype=int)
     owner[labels.ravel()[at] - 1] = at // (BLOB_LINES * BLOB_COLUMNS)
     share = sums / scene.total(tiles.weight)[owner]
+    # what is no blob of its own does not count: one blob holds all
+    counts = share >= BLOB_SHARE
     largest = np.zeros(n)
     np.maximum.at(largest, owner, share)
     return {
-        "blob_count": total(owner, (share >= BLOB_SHARE).astype(float), n),
-        "largest_blob": np.clip(largest, 0.0, 1.0),
+        "blob_count": total(owner, counts.astype(float), n),
+        "largest_blob": ratio(largest, total(owner, share * counts, n)),
     }
+
+
+def _line(frequency: np.ndarray) -> np.ndarray:
+    line = np.log2(np.maximum(frequency, 1.0)) / BLOB_OCTAVES
+    return np.clip(line.astype(int), 0, BLOB_LINES - 1)
 
 
 def _samples(scene: Scene) -> dict[str, np.ndarray]:

