@@ -1,9 +1,9 @@
 """The same waveform in other noise: features at SNR 8 against those at SNR 80.
 
 Allowed: no feature drifts by more than 0.2 of its ranks from one end to the other, and
-it moves by less than 0.9 of what lies between families, or by less than 0.15. Polarity is noise where a
-waveform has none, and the context is that of other transients; both may do what they
-like. Forty features move by less than 0.6.
+it moves by less than 0.9 of what lies between families, or by less than 0.15. Polarity
+is noise where a waveform has none, and the context is that of other transients; both
+may do what they like. Forty features move by less than 0.6.
 """
 
 import numpy as np
