@@ -49,7 +49,8 @@ def measure_comb(scene: Scene, *, mains_hz: float) -> dict[str, np.ndarray]:
     ceiling = int(np.ceil(high.max() / step)) + 1
     f_all = np.arange(scene.power.shape[1])[:ceiling] * step
     band = (f_all >= low) & (f_all <= high)
-    whole = np.where(band, scene.power[:, :ceiling] - 1.0, 0.0).sum(axis=1)
+    whole = np.where(band, scene.power[:, :ceiling] - 1.0, 0.0)
+    whole = whole.sum(axis=1, dtype=np.float64)
     teeth = np.zeros((scene.count, TEETH))
     for k in range(TEETH):
         teeth[:, k] = excess[:, on & (number == k + 1)].sum(axis=1)

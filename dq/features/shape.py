@@ -92,13 +92,15 @@ def _samples(scene: Scene) -> dict[str, np.ndarray]:
     x = np.where(core, x, 0.0)
     top, bottom = x.max(axis=1), x.min(axis=1)
     modulus = np.abs(x)
-    running = np.cumsum(x, axis=1)
+    running = np.cumsum(x, axis=1, dtype=np.float64)
     length = np.maximum(core.sum(axis=1), 1)
-    rms = np.sqrt(np.square(x).sum(axis=1) / length)
+    rms = np.sqrt(np.square(x).sum(axis=1, dtype=np.float64) / length)
     loudest = modulus.max(axis=1)
     return {
         "polarity": ratio(top + bottom, top - bottom),
-        "step": ratio(np.abs(running).max(axis=1), modulus.sum(axis=1)),
+        "step": ratio(
+            np.abs(running).max(axis=1), modulus.sum(axis=1, dtype=np.float64)
+        ),
         "crest": ratio(loudest, rms),
         "half_cycles": _half_cycles(x, modulus, loudest),
     }

@@ -22,8 +22,8 @@ from dq.segments import Segments, to_ns_array
 
 _NS = 1_000_000_000
 
-#: Samples of snippets that are kept before they are measured (64 MiB of float32).
-_KEPT_SAMPLES = 2**24
+#: Samples of snippets that are kept before they are measured (16 MiB of float32).
+_KEPT_SAMPLES = 2**22
 
 #: A peak needs this much settled data on both sides, s: less shows no shape.
 _LEAST_S = 0.1

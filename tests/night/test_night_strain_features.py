@@ -46,7 +46,7 @@ def test_features_do_not_depend_on_what_else_was_asked_for(planted_channel):
     part = table.iloc[[40, 3, 17]]
     found = run(data, part, among=table).table
     assert found.index.tolist() == part.index.tolist()
-    np.testing.assert_allclose(found, whole.loc[part.index], rtol=1e-3, atol=1e-4)
+    np.testing.assert_allclose(found, whole.loc[part.index], rtol=1e-8, atol=1e-8)
 
 
 def test_the_search_block_does_not_matter(planted_channel):
