@@ -14,7 +14,7 @@ from pathlib import Path
 import pandas as pd
 
 from dq.config import Config
-from dq.errors import InputError
+from dq.errors import DqError, InputError
 from dq.features import NAMES
 from dq.night.code import ENGINE, code_digest
 from dq.night.folder import NightFolder
@@ -140,14 +140,20 @@ def _kept_features(plan: NightPlan, folder: NightFolder, ledger: Ledger):
             log.info("features of %d transients are kept from before", len(kept))
             return kept
     row = plan.inputs.strain
-    found = measure_transients(
-        plan.inputs.store.channel(row.name),
-        transients,
-        ready=plan.inputs.wanted,
-        config=plan.inputs.config,
-        f_low_hz=row.f_low_hz,
-        f_high_hz=row.f_high_hz,
-    )
+    try:
+        found = measure_transients(
+            plan.inputs.store.channel(row.name),
+            transients,
+            ready=plan.inputs.wanted,
+            config=plan.inputs.config,
+            f_low_hz=row.f_low_hz,
+            f_high_hz=row.f_high_hz,
+        )
+    except OSError as error:
+        raise DqError(
+            f"strain {row.name!r} cannot be read for its features: {error}; bring its "
+            "files back and run the same command"
+        ) from error
     for reason, count in sorted(Counter(found.left_out.values()).items()):
         log.warning("no features for %d transients: %s", count, reason)
     for old in folder.state.glob("features-*.csv"):

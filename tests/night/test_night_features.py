@@ -9,7 +9,7 @@ import pytest
 from small_site import SITE_SECONDS, SITE_START
 
 from dq.config import load_config
-from dq.errors import InputError
+from dq.errors import DqError, InputError
 from dq.features import NAMES
 from dq.night import feature_stage, run_night, veto_again
 from dq.night.ledger import read_ledger
@@ -150,6 +150,16 @@ def test_without_a_sorter_a_model_is_refused(small_site, tmp_path, monkeypatch):
     (config.parent / "model.txt").write_text("60")
     with pytest.raises(InputError, match="no family sorter"):
         night(config, tmp_path / "night")
+
+
+def test_lost_files_are_told_in_one_line(small_site, tmp_path, here, monkeypatch):
+    def lost(*args, **options):
+        raise OSError(5, "Input/output error")
+
+    monkeypatch.setattr(feature_stage, "measure_transients", lost)
+    with pytest.raises(DqError, match="run the same command") as told:
+        night(small_site(extra=WITH), tmp_path / "night")
+    assert told.value.exit_code == 1
 
 
 def test_a_table_of_another_length_is_refused(small_site, tmp_path, here):
