@@ -36,7 +36,7 @@ def measure_comb(scene: Scene, *, mains_hz: float) -> dict[str, np.ndarray]:
         Fundamental of the mains, 50 or 60 Hz.
     """
     step = 1.0 / scene.length_s
-    bins = min(int((TEETH + 0.5) * mains_hz / step), scene.power.shape[1])
+    bins = min(int((TEETH + 0.5) * mains_hz / step), scene.excess.shape[1])
     f = np.arange(bins) * step
     number = np.rint(f / mains_hz).astype(int)
     distance = np.abs(f - number * mains_hz)
@@ -45,11 +45,11 @@ def measure_comb(scene: Scene, *, mains_hz: float) -> dict[str, np.ndarray]:
     low = np.exp2(scene.octaves[:, :1] - SLACK_OCTAVES)
     high = np.exp2(scene.octaves[:, -1:] + SLACK_OCTAVES)
     inside = (f >= low) & (f <= high)
-    excess = np.where(inside, scene.power[:, :bins] - 1.0, 0.0).astype(np.float64)
+    excess = np.where(inside, scene.excess[:, :bins], 0.0).astype(np.float64)
     ceiling = int(np.ceil(high.max() / step)) + 1
-    f_all = np.arange(scene.power.shape[1])[:ceiling] * step
+    f_all = np.arange(scene.excess.shape[1])[:ceiling] * step
     band = (f_all >= low) & (f_all <= high)
-    whole = np.where(band, scene.power[:, :ceiling] - 1.0, 0.0)
+    whole = np.where(band, scene.excess[:, :ceiling], 0.0)
     whole = whole.sum(axis=1, dtype=np.float64)
     teeth = np.zeros((scene.count, TEETH))
     for k in range(TEETH):

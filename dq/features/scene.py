@@ -89,9 +89,10 @@ class Scene:
         Times at which 5, 25, 50, 75 and 95 % of the energy have passed, s.
     octaves : ndarray, shape (count, 5)
         The same over log2 of the frequency in Hz.
-    power : ndarray, shape (count, n_bins)
-        Spectrum of the windowed samples over the noise's mean (1), bins of
-        ``1 / length_s`` Hz.
+    excess : ndarray, shape (count, n_bins)
+        Spectrum of the windowed samples, in units of white noise's mean, less what
+        noise has there (less than 1 in the notch of a line); bins of ``1 / length_s``
+        Hz.
     low_hz, high_hz : ndarray, shape (count,)
         Band of the energy, within which lines and samples are looked at.
     samples : ndarray of float32, shape (count, n_samples)
@@ -107,7 +108,7 @@ class Scene:
     peak: np.ndarray
     times: np.ndarray
     octaves: np.ndarray
-    power: np.ndarray
+    excess: np.ndarray
     low_hz: np.ndarray
     high_hz: np.ndarray
     samples: np.ndarray
@@ -208,7 +209,7 @@ def make_scene(snippets: list[Snippet], *, f_low_hz: float = MAP_LOW_HZ) -> Scen
     # shares of the energy say where the band ends; the table's own edges widen with SNR
     low = np.exp2(octaves[:, 0] - BAND_SLACK)
     high = np.minimum(np.exp2(octaves[:, -1] + BAND_SLACK), 0.5 * rate)
-    power, inside = _windowed(values, times, low, high, rate)
+    excess, inside = _windowed(values, times, low, high, snippets)
     return Scene(
         count=count,
         sample_rate=rate,
@@ -217,7 +218,7 @@ def make_scene(snippets: list[Snippet], *, f_low_hz: float = MAP_LOW_HZ) -> Scen
         peak=peak,
         times=times,
         octaves=octaves,
-        power=power,
+        excess=excess,
         low_hz=low,
         high_hz=high,
         samples=inside,
@@ -338,9 +339,9 @@ def _row_step(plan) -> np.ndarray:
     return out
 
 
-def _windowed(values, times, low, high, rate):
-    """Give the spectrum under a window over the transient, and the samples in band."""
-    samples = values.shape[1]
+def _windowed(values, times, low, high, snippets):
+    """Give the excess under a window over the transient, and the samples in band."""
+    samples, rate = values.shape[1], snippets[0].sample_rate
     first = times[:, 0] - 0.5 * np.maximum(
         LEAST_FLAT_S - (times[:, 4] - times[:, 0]), 0
     )
@@ -354,8 +355,14 @@ def _windowed(values, times, low, high, rate):
     spectra = scipy.fft.rfft(values * window, axis=1, workers=1)
     norm = np.square(window).sum(axis=1)[:, None]
     parts = np.square(spectra.view(np.float32))
-    power = (parts[:, ::2] + parts[:, 1::2]) / norm
+    excess = (parts[:, ::2] + parts[:, 1::2]) / norm
     f = np.arange(spectra.shape[1]) * (rate / samples)
+    known: dict[int, np.ndarray] = {}
+    for row, s in enumerate(snippets):
+        if id(s.density) not in known:
+            noise = np.interp(f, s.frequency, s.density)
+            known[id(s.density)] = noise.astype(np.float32)
+        excess[row] -= known[id(s.density)]
     spectra[(f < low[:, None]) | (f > high[:, None])] = 0.0
     inside = scipy.fft.irfft(spectra, n=samples, axis=1, workers=1)
-    return power, inside
+    return excess, inside

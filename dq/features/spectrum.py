@@ -13,9 +13,10 @@ from dq.features.spec import group_of
 LINE_HALF_HZ = 2.0
 SMOOTH_HALF_HZ = 3.0
 
-#: A mode stands above this share of the strongest and this many times the noise.
-MODE_SHARE = 0.2
-MODE_FLOOR = 4.0
+#: A mode stands above this share of the strongest, and above the noise by this much of
+#: its mean; a bin counts as occupied likewise (own choice: a tenth is 10 dB down).
+MODE_SHARE, MODE_FLOOR = 0.2, 3.0
+LOUD_SHARE, LOUD_FLOOR = 0.1, 2.0
 
 FEATURES = group_of(
     "spectrum",
@@ -64,33 +65,31 @@ def measure_spectrum(scene: Scene) -> dict[str, np.ndarray]:
     }
 
 
-def _running(power: np.ndarray, half: int) -> np.ndarray:
+def _running(excess: np.ndarray, half: int) -> np.ndarray:
     """Sum over ``2 half + 1`` bins around each bin."""
-    sums = np.cumsum(np.pad(power, ((0, 0), (half + 1, half))), axis=1)
+    sums = np.cumsum(np.pad(excess, ((0, 0), (half + 1, half))), axis=1)
     return sums[:, 2 * half + 1 :] - sums[:, : -2 * half - 1]
 
 
 def _lines(scene: Scene) -> dict[str, np.ndarray]:
     step = 1.0 / scene.length_s
-    top = min(int(scene.high_hz.max() / step) + 2, scene.power.shape[1])
+    top = min(int(scene.high_hz.max() / step) + 2, scene.excess.shape[1])
     f = np.arange(top) * step
     inside = (f >= scene.low_hz[:, None]) & (f <= scene.high_hz[:, None])
-    power = np.where(inside, scene.power[:, :top], 0.0).astype(np.float64)
-    excess = np.where(inside, power - 1.0, 0.0)
+    excess = np.where(inside, scene.excess[:, :top], 0.0).astype(np.float64)
     whole = np.maximum(excess.sum(axis=1), 1.0)
     line = _running(excess, round(LINE_HALF_HZ / step)).max(axis=1)
     half = round(SMOOTH_HALF_HZ / step)
-    smooth = _running(power, half) / (2 * half + 1)
+    smooth = _running(excess, half) / (2 * half + 1)
     best = smooth.max(axis=1, keepdims=True)
     high = smooth >= np.maximum(MODE_SHARE * best, MODE_FLOOR)
     rising = smooth[:, 1:-1] > smooth[:, :-2]
     crest = rising & (smooth[:, 1:-1] >= smooth[:, 2:]) & high[:, 1:-1]
-    loud = np.where(
-        power >= np.maximum(0.1 * power.max(axis=1), 3.0)[:, None], power, 0
-    )
+    floor = np.maximum(LOUD_SHARE * excess.max(axis=1), LOUD_FLOOR)
+    loud = np.where(excess >= floor[:, None], excess, 0.0)
     filled = ratio(loud.sum(axis=1) ** 2, np.square(loud).sum(axis=1))
     return {
-        "line_frequency_hz": f[power.argmax(axis=1)],
+        "line_frequency_hz": f[excess.argmax(axis=1)],
         "line_share": np.clip(line / whole, 0.0, 1.0),
         "occupied_hz": filled * step,
         "mode_count": crest.sum(axis=1).astype(float),

@@ -309,3 +309,21 @@ def test_energies_are_divided_by_what_noise_has_in_the_row(rng):
     whole, doubled = make_scene([snippet]), make_scene([half])
     top = whole.tiles.energy[whole.peak[0]]
     assert doubled.tiles.energy[doubled.peak[0]] == pytest.approx(2 * top, rel=1e-5)
+
+
+def test_the_notch_of_a_line_counts_as_noise_not_as_less(rng):
+    from dataclasses import replace
+
+    # noise with a notch around 50 Hz, as whitening leaves it at a strong line
+    snippet = snippet_of(np.ones_like, snr=0, rng=rng, **BURST)
+    spectrum = np.fft.rfft(snippet.values)
+    f = np.fft.rfftfreq(len(snippet.values), 1 / RATE)
+    spectrum[(f > 40) & (f < 60)] *= 0.1
+    notched = replace(
+        snippet,
+        values=np.fft.irfft(spectrum).astype(np.float32),
+        density=np.where((snippet.frequency > 40) & (snippet.frequency < 60), 0.01, 1),
+    )
+    excess = make_scene([notched]).excess[0]
+    assert abs(excess[(f > 45) & (f < 55)].mean()) < 0.1
+    assert abs(excess[(f > 100) & (f < 900)].mean()) < 0.3
