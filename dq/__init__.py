@@ -7,6 +7,8 @@ store         HDF5 channels, the channel list, ready segments
 conditioning  noise spectrum, whitening, data faults
 tiles         multi-Q tile plan and normalised tile energies
 transients    loud tiles gathered into transients
+features      numbers that tell families of transients apart
+families      the sorter of families, trained from labels
 witnesses     which auxiliary channels saw the strain's transients, beyond chance
 vetoes        faults and witnesses turned into segments under a dead-time budget
 cost          what a set of veto segments removes, and for how much time
@@ -36,6 +38,7 @@ _FACES = {
     "open_store": "dq.store",
     "read_channel_list": "dq.store",
     "analyse_channel": "dq.night.channel",
+    "measure": "dq.features",
     "find_witnesses": "dq.witnesses",
     "build_vetoes": "dq.vetoes",
     "choose_vetoes": "dq.vetoes",

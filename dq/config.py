@@ -29,6 +29,12 @@ class Site(_Section):
         pattern=r"^[A-Za-z0-9][A-Za-z0-9:_.\-]{0,254}$",
         description="name of the strain channel",
     )
+    mains_hz: float = Field(
+        default=50.0,
+        ge=40.0,
+        le=70.0,
+        description="Hz; fundamental of the mains, 50 or 60 by country",
+    )
 
 
 class Layout(_Section):
@@ -161,6 +167,10 @@ class Families(_Section):
     """The sorter."""
 
     model: str | None = Field(default=None, description="model file; absent = unsorted")
+    features: bool = Field(
+        default=False,
+        description="write the strain's features also without a model",
+    )
 
 
 class Witnesses(_Section):

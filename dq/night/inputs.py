@@ -122,6 +122,9 @@ def read_inputs(config: Config) -> Inputs:
         for key in ("channels", "ready", "injections")
         if (name := getattr(data, key)) is not None
     }
+    model = config.families.model
+    if model is not None and config.path(model).is_file():
+        texts["model"] = file_digest(config.path(model))
     return Inputs(config, channels, ready, injections, store, texts)
 
 

@@ -82,6 +82,8 @@ def judge(ledger: Ledger, config: Config) -> Verdict:
     vetoes = _in_order(built, chosen)
     cost = cost_of(vetoes, strain, analysed=analysed)
     table = strain_table(strain, witnesses, auxiliary, vetoes)
+    if ledger.families is not None:
+        table = table.assign(**{c: ledger.families[c].array for c in ledger.families})
     return Verdict(table, witnesses, vetoes, cost, analysed, refused)
 
 

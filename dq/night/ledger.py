@@ -13,14 +13,35 @@ import numpy as np
 import pandas as pd
 
 from dq.errors import InputError
+from dq.features.registry import FEATURES
 from dq.night.channel import ChannelResult
 from dq.segments import Segments
 from dq.store import Channel
-from dq.tables import COVERAGE, NIGHT_CHANNELS, conform, csv_table
+from dq.tables import (
+    COVERAGE,
+    NIGHT_CHANNELS,
+    STRAIN_TRANSIENTS,
+    Column,
+    conform,
+    csv_table,
+)
 
 CHANNELS_FILE = "channels.csv"
 COVERAGE_FILE = "coverage.csv"
 TRANSIENTS_FILE = "transients.h5"
+STRAIN_FILE = "strain_transients.csv"
+FEATURES_FILE = "strain_features.csv"
+
+#: Columns of ``strain_features.csv``.
+FEATURE_COLUMNS: tuple[Column, ...] = (
+    Column("transient_id", "text", meaning="stable name of the transient"),
+    *(Column(f.name, "float", f.unit, "%.6g", f.meaning) for f in FEATURES),
+)
+
+_FAMILY = ("family", "probability", "family_set", "novelty")
+
+#: What the sorter says of a transient: columns of ``strain_transients.csv``.
+FAMILY_COLUMNS = tuple(c for c in STRAIN_TRANSIENTS if c.name in _FAMILY)
 
 _ACCOUNTED = ("analysed", "missing", "unjudged")
 
@@ -39,12 +60,19 @@ class Ledger:
         ``dq.tables.NIGHT_CHANNELS``.
     coverage : pandas.DataFrame
         ``dq.tables.COVERAGE``.
+    features : pandas.DataFrame or None
+        ``FEATURE_COLUMNS`` of the strain's transients, in their order; None where the
+        night measures none.
+    families : pandas.DataFrame or None
+        ``FAMILY_COLUMNS``, likewise; None without a model.
     """
 
     strain: str
     transients: dict[str, pd.DataFrame]
     channels: pd.DataFrame
     coverage: pd.DataFrame
+    features: pd.DataFrame | None = None
+    families: pd.DataFrame | None = None
 
     def time(self, kind: str) -> dict[str, Segments]:
         """Give the segments of one kind for every analysed channel."""
@@ -161,19 +189,37 @@ def read_ledger(directory: Path, strain: str) -> Ledger:
     """
     from dq.writers import read_transients_h5
 
-    tables = {}
-    for name, columns in (
-        (CHANNELS_FILE, NIGHT_CHANNELS),
-        (COVERAGE_FILE, COVERAGE),
-    ):
-        path = directory / name
-        try:
-            tables[name] = csv_table(path.read_text(encoding="utf-8"), columns)
-        except (OSError, UnicodeDecodeError) as error:
-            raise InputError(
-                f"cannot read {str(path)!r}: {error}; run the night again"
-            ) from error
-        except InputError as error:
-            raise InputError(f"{str(path)!r}: {error}; run the night again") from error
     transients = read_transients_h5(directory / TRANSIENTS_FILE)
-    return Ledger(strain, transients, tables[CHANNELS_FILE], tables[COVERAGE_FILE])
+    rows = len(transients.get(strain, ()))
+    features = _read_table(directory / FEATURES_FILE, FEATURE_COLUMNS, rows=rows)
+    families = None
+    if features is not None:
+        families = _read_table(directory / STRAIN_FILE, FAMILY_COLUMNS, rows=rows)
+    return Ledger(
+        strain,
+        transients,
+        _read_table(directory / CHANNELS_FILE, NIGHT_CHANNELS),
+        _read_table(directory / COVERAGE_FILE, COVERAGE),
+        features,
+        families,
+    )
+
+
+def _read_table(path: Path, columns, *, rows: int | None = None):
+    """Read one table; with ``rows`` it may be absent, and must have that many."""
+    if rows is not None and not path.exists():
+        return None
+    try:
+        table = csv_table(path.read_text(encoding="utf-8"), columns)
+    except (OSError, UnicodeDecodeError) as error:
+        raise InputError(
+            f"cannot read {str(path)!r}: {error}; run the night again"
+        ) from error
+    except InputError as error:
+        raise InputError(f"{str(path)!r}: {error}; run the night again") from error
+    if rows is not None and len(table) != rows:
+        raise InputError(
+            f"{str(path)!r} has {len(table)} rows for {rows} strain transients; run "
+            "the night again"
+        )
+    return table

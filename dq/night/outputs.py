@@ -19,6 +19,9 @@ from dq.night.judge import Verdict, judge
 from dq.night.ledger import (
     CHANNELS_FILE,
     COVERAGE_FILE,
+    FEATURE_COLUMNS,
+    FEATURES_FILE,
+    STRAIN_FILE,
     TRANSIENTS_FILE,
     Ledger,
     read_ledger,
@@ -109,8 +112,26 @@ def write_night(
     )
     write_table(directory / CHANNELS_FILE, ledger.channels, NIGHT_CHANNELS)
     write_table(directory / COVERAGE_FILE, ledger.coverage, COVERAGE)
+    _write_features(directory, ledger)
     lap("tables")
     return write_verdict(directory, config, manifest, lap=lap)
+
+
+def _write_features(directory: Path, ledger: Ledger) -> None:
+    """Write features and families where the verdict will read them back."""
+    from dq.writers import write_table
+
+    if ledger.features is None:
+        (directory / FEATURES_FILE).unlink(missing_ok=True)
+        return
+    write_table(directory / FEATURES_FILE, ledger.features, FEATURE_COLUMNS)
+    strain = ledger.transients[ledger.strain].assign(
+        transient_id=ledger.features["transient_id"].array, family="unsorted"
+    )
+    if ledger.families is not None:
+        families = {c: ledger.families[c].array for c in ledger.families}
+        strain = strain.assign(**families)
+    write_table(directory / STRAIN_FILE, strain, STRAIN_TRANSIENTS)
 
 
 def _attributes(row) -> dict:
@@ -139,7 +160,7 @@ def write_verdict(
         log.info("veto %s not chosen: %s", name, reason)
     lap("witnesses and vetoes")
     for name, table, columns in (
-        ("strain_transients.csv", verdict.strain, STRAIN_TRANSIENTS),
+        (STRAIN_FILE, verdict.strain, STRAIN_TRANSIENTS),
         ("witnesses.csv", verdict.witnesses, WITNESSES),
         ("vetoes.csv", verdict.vetoes, VETOES),
         ("veto_cost.csv", verdict.cost, VETO_COST),

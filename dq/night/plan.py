@@ -101,7 +101,7 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
             plan.left_out[row.name] = str(error)
     plan.tasks.sort(key=lambda t: (t.channel != strain.name, -t.weight, t.channel))
     keys = {t.channel: t.key for t in plan.tasks}
-    plan.request = _sha256(
+    plan.request = sha256_of(
         code_digest(),
         digest(inputs.config),
         inputs.texts,
@@ -112,7 +112,7 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
     contents = {
         t.channel: inputs.store.content_id(t.channel, plan.reach) for t in plan.tasks
     }
-    plan.inputs_sha256 = _sha256(inputs.texts, contents)
+    plan.inputs_sha256 = sha256_of(inputs.texts, contents)
     return plan
 
 
@@ -142,7 +142,7 @@ def _key(plan: NightPlan, row: Channel) -> str:
     """Give the digest of everything that a channel's result depends on."""
     inputs, config = plan.inputs, plan.inputs.config
     ready = inputs.wanted & plan.reach
-    return _sha256(
+    return sha256_of(
         code_digest(*ENGINE),
         row.name,
         digest(config.conditioning, config.tiles, config.transients),
@@ -153,6 +153,7 @@ def _key(plan: NightPlan, row: Channel) -> str:
     )
 
 
-def _sha256(*values) -> str:
+def sha256_of(*values) -> str:
+    """Give the sha256 of values that JSON can hold."""
     text = json.dumps(values, sort_keys=True, separators=(",", ":"))
     return hashlib.sha256(text.encode()).hexdigest()

@@ -12,6 +12,7 @@ from pathlib import Path
 from dq.config import Config
 from dq.errors import NoDataError
 from dq.night.channel import ChannelResult
+from dq.night.feature_stage import check_model, with_families
 from dq.night.folder import STATE, NightFolder, check_folder
 from dq.night.inputs import Inputs, check_range, read_inputs
 from dq.night.ledger import make_ledger
@@ -94,6 +95,8 @@ def run_night(
     check_folder(out)
     clock = _Clock()
     inputs = read_inputs(config)
+    if config.families.model is not None:
+        check_model(config.path(config.families.model))
     plan = plan_night(inputs, start_ns, end_ns, out / STATE)
     clock.lap("headers")
     with NightFolder(out) as folder:
@@ -108,6 +111,8 @@ def run_night(
         for name, reason in sorted(left_out.items()):
             log.warning("left out: %s: %s", name, reason)
         ledger = make_ledger([inputs.strain, *inputs.auxiliary], results, left_out)
+        ledger = with_families(plan, folder, ledger)
+        clock.lap("features")
         manifest = new_manifest(plan, ledger, left_out)
         write_night(out, config, ledger, manifest, lap=clock.lap)
         return _outcome(out, manifest, clock)
