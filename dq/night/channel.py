@@ -27,6 +27,7 @@ from dq.night.blocks import (
     plan_blocks,
 )
 from dq.night.fault_log import FaultLog
+from dq.night.motion import Derived, MotionPlan, MotionRun
 from dq.night.spectra import FrameSpectra
 from dq.night.stream import Piece, SampleWindow
 from dq.segments import Segments
@@ -69,6 +70,8 @@ class ChannelResult:
         ``saturation``, ``flat_line``, ``dropout``, ``not_finite``.
     notes : list of str
         What a reader should know, one line each.
+    derived : dict of str to Derived
+        Slow and derived witnesses by name.
     """
 
     channel: str
@@ -81,6 +84,7 @@ class ChannelResult:
     unjudged: Segments
     faults: dict[str, Segments]
     notes: list[str] = field(default_factory=list)
+    derived: dict[str, Derived] = field(default_factory=dict)
 
 
 @dataclass
@@ -99,7 +103,7 @@ class _Item:
 class _ChannelRun:
     """The batch loop over one channel; see :func:`analyse_channel`."""
 
-    def __init__(self, data, plan: BlockPlan, config: Config, ready, wanted):
+    def __init__(self, data, plan: BlockPlan, config: Config, ready, wanted, motion):
         settings = config.conditioning
         self.plan = plan
         self.wanted = wanted
@@ -122,6 +126,9 @@ class _ChannelRun:
         segment_ns = round(plan.segment / plan.rate * _NS)
         reach = self.frames.span_ns + self.frames.frame_ns + segment_ns
         self.context_ns = max(reach, plan.pad_ns + segment_ns)
+        self.motion = MotionRun(motion, data.rate, plan.batch_ns) if motion else None
+        if self.motion:
+            self.context_ns = max(self.context_ns, self.motion.reach_ns)
 
     def batch(self, start_ns: int, *, last: bool) -> None:
         """Analyse the blocks of the batch that starts at ``start_ns``."""
@@ -130,6 +137,8 @@ class _ChannelRun:
         self.window.move(start_ns - self.context_ns, end_ns + self.context_ns)
         pieces = self.window.pieces
         bad = self.faults.examine(pieces)
+        if self.motion:
+            self.motion.take(pieces, start_ns // plan.batch_ns)
         self.finite += [(p.start_ns, p.end_ns) for p in pieces]
         self.frames.update(pieces, start_ns, end_ns, bad)
         items = []
@@ -251,6 +260,7 @@ def analyse_channel(
     config: Config,
     f_low_hz: float | None = None,
     f_high_hz: float | None = None,
+    motion: MotionPlan | None = None,
     progress=None,
 ) -> ChannelResult:
     """Find the transients of one channel in ``[start_ns, end_ns)``.
@@ -267,6 +277,8 @@ def analyse_channel(
     config : Config
     f_low_hz, f_high_hz : float, optional
         The channel's own band; the configuration's otherwise.
+    motion : MotionPlan, optional
+        What is derived from the channel besides; nothing by default.
     progress : callable, optional
         Called with the fraction done, after each batch.
 
@@ -295,7 +307,7 @@ def analyse_channel(
     tiles = config.tiles
     f_low = f_low_hz or tiles.f_low_hz or default_low_edge(float(data.rate))
     plan = plan_blocks(data.rate, config, f_low, f_high_hz or tiles.f_high_hz)
-    run = _ChannelRun(data, plan, config, ready & recorded, wanted)
+    run = _ChannelRun(data, plan, config, ready & recorded, wanted, motion)
     batches = _batches(wanted & recorded, plan.batch_ns)
     for number, index in enumerate(batches):
         follows = number + 1 < len(batches) and batches[number + 1] == index + 1
@@ -307,6 +319,8 @@ def analyse_channel(
             f"channel {data.name!r} is constant at {run.faults.lowest:g} "
             "throughout; it is dead or not connected"
         )
+    if run.motion:
+        run.motion.read_around(data, ready & recorded, wanted & recorded)
     return _result(data, run, plan, wanted, recorded, f_low)
 
 
@@ -332,6 +346,10 @@ def _result(data, run: _ChannelRun, plan, wanted, recorded, f_low) -> ChannelRes
         )
     if run.cut:
         notes.append("transients longer than a batch of blocks were cut at its end")
+    derived = {}
+    if run.motion:
+        notes += run.motion.plan.notes
+        derived = run.motion.derived(data.name, wanted)
     return ChannelResult(
         channel=data.name,
         sample_rate=float(data.rate),
@@ -343,4 +361,5 @@ def _result(data, run: _ChannelRun, plan, wanted, recorded, f_low) -> ChannelRes
         unjudged=finite - analysed,
         faults=faults,
         notes=notes,
+        derived=derived,
     )

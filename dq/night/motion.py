@@ -1,0 +1,419 @@
+"""Slow motion in the night: which channels get derived witnesses, and their tables.
+
+A channel's batches hand their samples over as they pass (:meth:`MotionRun.take`);
+levels are kept for cells of a fixed GPS grid. After the last batch the neighbourhood of
+the range is read as far as the running median reaches, so that a second's result does
+not depend on the range that was asked for.
+"""
+
+from __future__ import annotations
+
+from dataclasses import asdict, dataclass, field
+from fractions import Fraction
+
+import numpy as np
+import pandas as pd
+
+from dq.config import Config
+from dq.motion import (
+    BandPlan,
+    Cells,
+    FringeSource,
+    active_rows,
+    band_rms,
+    block_reference,
+    fringe_rows,
+    length_scale,
+    octave_bands,
+    plan_bands,
+    speed_extremes,
+)
+from dq.motion.activity import LEAST_PERIODS, REFERENCE_BLOCK_S, REFERENCE_SIDE
+from dq.motion.filters import Halvings
+from dq.motion.fringe import FRINGE_CELL_S, speed_reach
+from dq.night.blocks import default_low_edge
+from dq.night.stream import Piece, SampleWindow
+from dq.segments import Segments
+from dq.store import Channel
+from dq.tables import TRANSIENTS, conform
+
+_NS = 1_000_000_000
+
+#: Quantities of the channel list that predict a fringe frequency.
+_MOVING = ("displacement", "velocity")
+
+#: Lowest rate that holds motion up to the stop band of the speed's filter, Hz.
+_LEAST_FRINGE_RATE = 16.0
+
+#: Fewest cells whose median velocity is taken for a sensor's offset: half a minute.
+_LEAST_OFFSET_CELLS = 240
+
+
+@dataclass(frozen=True)
+class MotionPlan:
+    """What is derived from one channel; equal plans on equal samples give equal tables.
+
+    Attributes
+    ----------
+    bands : tuple of (float, float)
+        Octaves whose level is watched, Hz.
+    rms_ladder, fringe_ladder : tuple of float
+    source : FringeSource or None
+        None: no fringe frequency is predicted.
+    passes : tuple of int
+    edge_hz : float
+        Lower edge of the strain's band.
+    wavelength_m : float
+    notes : tuple of str
+    """
+
+    bands: tuple[tuple[float, float], ...] = ()
+    rms_ladder: tuple[float, ...] = ()
+    source: FringeSource | None = None
+    passes: tuple[int, ...] = ()
+    fringe_ladder: tuple[float, ...] = ()
+    edge_hz: float = 0.0
+    wavelength_m: float = 0.0
+    notes: tuple[str, ...] = ()
+
+    def names(self, channel: str) -> list[str]:
+        """Give the names of the derived channels."""
+        names = [rms_name(channel, low, high) for low, high in self.bands]
+        if self.source:
+            names += [fringe_name(channel, n) for n in self.passes]
+        return names
+
+    def key(self) -> dict:
+        """Give the plan as plain values, for the key of a channel's state."""
+        return asdict(self)
+
+
+@dataclass(frozen=True)
+class Derived:
+    """One derived channel.
+
+    Attributes
+    ----------
+    sample_rate : float
+        Levels per second.
+    f_low_hz, f_high_hz : float
+    transients : pandas.DataFrame
+        ``dq.tables.TRANSIENTS``.
+    analysed : Segments
+        Time with a level and a reference for it.
+    """
+
+    sample_rate: float
+    f_low_hz: float
+    f_high_hz: float
+    transients: pd.DataFrame
+    analysed: Segments
+
+
+def rms_name(channel: str, low_hz: float, high_hz: float) -> str:
+    """Name a band's level; ``@`` occurs in no channel's name."""
+    return f"{channel}@rms-{low_hz:g}-{high_hz:g}Hz"
+
+
+def fringe_name(channel: str, passes: int) -> str:
+    """Name a predicted fringe frequency."""
+    return f"{channel}@fringe-n{passes}"
+
+
+def strain_edge(strain: Channel, rate: float, config: Config) -> float:
+    """Give the lower edge of the strain's band in Hz."""
+    return strain.f_low_hz or config.tiles.f_low_hz or default_low_edge(rate)
+
+
+def plan_motion(
+    row: Channel, rate: float, unit: str, config: Config, edge_hz: float
+) -> MotionPlan | None:
+    """Say what is derived from a channel.
+
+    Parameters
+    ----------
+    row : Channel
+        Its row of the channel list.
+    rate : float
+        Hz.
+    unit : str
+        Of the recording, used where the list gives none.
+    config : Config
+    edge_hz : float
+        From :func:`strain_edge`.
+
+    Returns
+    -------
+    MotionPlan or None
+        None: nothing. Unsafe channels can never be witnesses, so nothing is derived
+        from them; nor from the strain.
+    """
+    if row.role != "auxiliary" or row.safe == "no":
+        return None
+    settings = config.witnesses
+    bands, notes, source = [], [], None
+    if rate <= settings.slow_max_rate_hz:
+        bands = octave_bands(settings.rms_low_hz, settings.rms_high_hz, rate)
+    quantity = row.quantity.strip().lower()
+    if quantity in _MOVING and settings.fringe_passes:
+        unit = row.unit or unit
+        scale = length_scale(unit, quantity)
+        if scale is None:
+            wanted = "m" if quantity == "displacement" else "m/s"
+            notes.append(
+                f"no fringe frequency: unit {unit!r} is no {quantity}; give {wanted} "
+                "with an SI prefix (such as um) in the channel list"
+            )
+        elif rate < _LEAST_FRINGE_RATE:
+            notes.append(
+                f"no fringe frequency: {rate:g} Hz is below {_LEAST_FRINGE_RATE:g} Hz"
+            )
+        else:
+            source = FringeSource(quantity == "velocity", scale)
+    if not bands and source is None and not notes:
+        return None
+    return MotionPlan(
+        bands=tuple(bands),
+        rms_ladder=tuple(settings.rms_thresholds),
+        source=source,
+        passes=tuple(settings.fringe_passes),
+        fringe_ladder=tuple(settings.fringe_thresholds),
+        edge_hz=edge_hz,
+        wavelength_m=settings.wavelength_nm * 1e-9,
+        notes=tuple(notes),
+    )
+
+
+@dataclass
+class _Track:
+    """Cells as they come; each entry is a column."""
+
+    cell_s: float
+    number: list[np.ndarray] = field(default_factory=list)
+    columns: list[tuple[np.ndarray, ...]] = field(default_factory=list)
+
+    def add(self, first: int, low: int, high: int, *columns: np.ndarray) -> None:
+        """Keep the cells ``low <= number < high`` of columns that start at first."""
+        begin, end = max(low - first, 0), min(high - first, len(columns[0]))
+        if end > begin:
+            self.number.append(np.arange(first + begin, first + end))
+            # half the memory; the levels' own scatter is many times larger
+            self.columns.append(tuple(c[begin:end].astype(np.float32) for c in columns))
+
+    def gathered(self, columns: int) -> tuple[np.ndarray, ...]:
+        """Give numbers and columns in order of time."""
+        if not self.number:
+            return (np.zeros(0, np.int64), *(np.zeros(0) for _ in range(columns)))
+        number = np.concatenate(self.number)
+        order = np.argsort(number, kind="stable")
+        joined = [
+            np.concatenate([c[k] for c in self.columns]).astype(float)[order]
+            for k in range(columns)
+        ]
+        return (number[order], *joined)
+
+
+class MotionRun:
+    """Levels of one channel, batch by batch.
+
+    Parameters
+    ----------
+    plan : MotionPlan
+    rate : Fraction
+        Hz.
+    batch_ns : int
+        Batches start at GPS multiples of this.
+    """
+
+    def __init__(self, plan: MotionPlan, rate: Fraction, batch_ns: int):
+        self.plan = plan
+        self.rate = Fraction(rate)
+        self.batch_ns = batch_ns
+        self.bands: list[BandPlan] = plan_bands(list(plan.bands), float(rate))
+        self._levels = [_Track(band.cell_s) for band in self.bands]
+        self._speed = _Track(FRINGE_CELL_S)
+        self._done: set[int] = set()
+        reach = [band.reach_s for band in self.bands]
+        if plan.source:
+            reach.append(speed_reach(float(rate)))
+        longest = max((band.cell_s for band in self.bands), default=1.0)
+        #: Samples this far around a batch touch its cells.
+        self.reach_ns = round((max(reach, default=0.0) + longest) * _NS)
+
+    def take(self, pieces: list[Piece], batch: int) -> None:
+        """Measure the cells that start in a batch.
+
+        Parameters
+        ----------
+        pieces : list of Piece
+            Contiguous samples; they should reach ``reach_ns`` beyond the batch where
+            samples exist.
+        batch : int
+            The batch starts at ``batch * batch_ns``.
+        """
+        if batch in self._done:
+            return
+        self._done.add(batch)
+        start, end = batch * self.batch_ns, (batch + 1) * self.batch_ns
+        for piece in pieces:
+            # exactly what counts, so that sums do not depend on what else was read
+            first = max(piece.index_from(start - self.reach_ns), 0)
+            stop = min(piece.index_from(end + self.reach_ns), len(piece))
+            if stop <= first:
+                continue
+            at = Fraction(piece.start_ns) * self.rate / _NS
+            stretch = Halvings(piece.values[first:stop], round(at) + first)
+            self._measure(stretch, start, end)
+
+    def _measure(self, stretch: Halvings, start_ns: int, end_ns: int) -> None:
+        rate = float(self.rate)
+        for band, track in zip(self.bands, self._levels, strict=True):
+            first, level = band_rms(stretch, band, rate)
+            low, high = _cells_in(start_ns, end_ns, band.cell_s)
+            if len(level):
+                values, number = stretch.level(band.halvings)
+                size = _sizes(values, number, first, len(level), band, rate)
+                track.add(first, low, high, level, size)
+        if self.plan.source:
+            first, slowest, fastest = speed_extremes(stretch, self.plan.source, rate)
+            low, high = _cells_in(start_ns, end_ns, FRINGE_CELL_S)
+            if len(slowest):
+                self._speed.add(first, low, high, slowest, fastest)
+
+    def read_around(self, data, ready: Segments, span: Segments) -> None:
+        """Read what lies beyond the batches and yet counts for the running medians."""
+        if not span:
+            return
+        block = round(REFERENCE_BLOCK_S * _NS)
+        low = (int(span.starts[0]) // block - REFERENCE_SIDE) * block
+        high = (int(span.ends[-1]) // block + 1 + REFERENCE_SIDE) * block
+        wanted: set[int] = set()
+        for start, end in ready.clip(low, high):
+            wanted.update(range(start // self.batch_ns, -(-end // self.batch_ns)))
+        window = SampleWindow(data, ready)
+        for batch in sorted(wanted - self._done):
+            start = batch * self.batch_ns
+            end = start + self.batch_ns
+            window.move(start - self.reach_ns, end + self.reach_ns)
+            self.take(window.pieces, batch)
+
+    def derived(self, channel: str, wanted: Segments) -> dict[str, Derived]:
+        """Give the derived channels in the wanted time.
+
+        Parameters
+        ----------
+        channel : str
+        wanted : Segments
+            Cells that do not lie in it as a whole are left out.
+        """
+        out = {}
+        for band, track in zip(self.bands, self._levels, strict=True):
+            name = rms_name(channel, band.low_hz, band.high_hz)
+            out[name] = self._level_table(band, track, wanted)
+        if self.plan.source:
+            cells = self._speed_cells(wanted)
+            for passes in self.plan.passes:
+                out[fringe_name(channel, passes)] = self._fringe(cells, passes)
+        return out
+
+    def _level_table(self, band: BandPlan, track: _Track, wanted) -> Derived:
+        number, level, size = track.gathered(2)
+        cells = Cells(number, level, band.cell_s)
+        least = int(np.ceil(LEAST_PERIODS / (band.low_hz * band.cell_s)))
+        reference = block_reference(cells, least=least, size=size)
+        known = np.isfinite(reference) & _whole_in(cells, wanted)
+        cells, reference = cells.take(known), reference[known]
+        table = active_rows(
+            Cells(cells.number, cells.level / reference, band.cell_s),
+            amplitude=cells.level,
+            ladder=list(self.plan.rms_ladder),
+        )
+        centre = float(np.sqrt(band.low_hz * band.high_hz))
+        table = table.drop(columns="lowest").assign(
+            frequency_hz=centre,
+            f_low_hz=band.low_hz,
+            f_high_hz=band.high_hz,
+            q=centre / (band.high_hz - band.low_hz),
+        )
+        return Derived(
+            sample_rate=1.0 / band.cell_s,
+            f_low_hz=band.low_hz,
+            f_high_hz=band.high_hz,
+            transients=_conformed(table),
+            analysed=_time_of(cells),
+        )
+
+    def _speed_cells(self, wanted: Segments) -> Cells:
+        number, low, high = self._speed.gathered(2)
+        middle = Cells(number, 0.5 * (low + high), FRINGE_CELL_S)
+        offset = _offset(middle)
+        speed = np.maximum(np.abs(low - offset), np.abs(high - offset))
+        cells = Cells(number, speed, FRINGE_CELL_S)
+        return cells.take(np.isfinite(speed) & _whole_in(cells, wanted))
+
+    def _fringe(self, cells: Cells, passes: int) -> Derived:
+        plan = self.plan
+        table = fringe_rows(
+            cells,
+            passes=passes,
+            edge_hz=plan.edge_hz,
+            ladder=list(plan.fringe_ladder),
+            wavelength_m=plan.wavelength_m,
+        )
+        top = float(table["frequency_hz"].max()) if len(table) else plan.edge_hz
+        return Derived(
+            sample_rate=1.0 / FRINGE_CELL_S,
+            f_low_hz=plan.edge_hz,
+            f_high_hz=round(top, 4),
+            transients=_conformed(table),
+            analysed=_time_of(cells),
+        )
+
+
+def _cells_in(start_ns: int, end_ns: int, cell_s: float) -> tuple[int, int]:
+    """Give the first cell that starts in a range and the first one after it."""
+    cell = Fraction(cell_s) * _NS
+    return -(-start_ns // cell), -(-end_ns // cell)
+
+
+def _sizes(values, number, first, count, band: BandPlan, rate: float) -> np.ndarray:
+    """Give the size of the samples at the start of each cell of a level."""
+    at = np.floor((first + np.arange(count)) * (band.cell_s * rate / 2**band.halvings))
+    at = np.clip(at.astype(np.int64) - number, 0, len(values) - 1)
+    return np.abs(values[at])
+
+
+def _offset(middle: Cells) -> np.ndarray:
+    """Give the running median of a signed velocity: what the sensor reads at rest."""
+    block = np.floor(middle.number * (middle.cell_s / REFERENCE_BLOCK_S))
+    out = np.full(len(block), np.nan)
+    for k in np.unique(block):
+        low = np.searchsorted(block, k - REFERENCE_SIDE, side="left")
+        high = np.searchsorted(block, k + REFERENCE_SIDE, side="right")
+        if high - low >= _LEAST_OFFSET_CELLS:
+            out[block == k] = np.median(middle.level[low:high])
+    return out
+
+
+def _bounds_ns(cells: Cells) -> tuple[np.ndarray, np.ndarray]:
+    start = np.round(cells.number * cells.cell_s * 1e6).astype(np.int64) * 1000
+    end = np.round((cells.number + 1) * cells.cell_s * 1e6).astype(np.int64) * 1000
+    return start, end
+
+
+def _whole_in(cells: Cells, time: Segments) -> np.ndarray:
+    start, end = _bounds_ns(cells)
+    index = np.searchsorted(time.starts, start, side="right") - 1
+    if len(time.ends) == 0:
+        return np.zeros(len(start), dtype=bool)
+    return (index >= 0) & (end <= time.ends[np.maximum(index, 0)])
+
+
+def _time_of(cells: Cells) -> Segments:
+    return Segments.from_arrays(*_bounds_ns(cells))
+
+
+def _conformed(table: pd.DataFrame) -> pd.DataFrame:
+    for name in ("gps_time", "gps_start", "gps_end", "snr"):
+        table[name] = table[name].round(6)
+    return conform(table, TRANSIENTS)
