@@ -28,9 +28,9 @@ REFERENCE_SIDE = 2
 #: choice: half as many independent levels).
 LEAST_PERIODS = 16
 
-#: A level below this share of the samples' size is rounding, not motion: filters in
-#: double precision leave parts in 1e15, samples in single precision parts in 1e8.
-_ROUNDING = 1e-9
+#: Medians are taken over one cell in this many seconds: 2560 levels give a median to
+#: 2 %, and sorting them all would cost more than the filters (own choice).
+_MEDIAN_EVERY_S = 2.0
 
 
 @dataclass(frozen=True)
@@ -53,38 +53,38 @@ class Cells:
         return Cells(self.number[chosen], self.level[chosen], self.cell_s)
 
 
-def block_reference(
-    cells: Cells, *, least: int, size: np.ndarray | None = None
-) -> np.ndarray:
+def block_reference(cells: Cells, *, least: int) -> np.ndarray:
     """Give for each cell the running median of the level.
+
+    Of an even number of levels, the upper one of the middle two.
 
     Parameters
     ----------
     cells : Cells
     least : int
         Fewer cells than this give no reference.
-    size : ndarray, optional
-        Of the samples behind each cell; a median that is rounding beside their median
-        is no reference.
 
     Returns
     -------
     ndarray of float
         NaN where there is no reference.
     """
-    block = np.floor(cells.number * (cells.cell_s / REFERENCE_BLOCK_S)).astype(np.int64)
+    every = max(round(_MEDIAN_EVERY_S / cells.cell_s), 1)
+    thin = np.flatnonzero(cells.number % every == 0)
+    per_block = REFERENCE_BLOCK_S / cells.cell_s
+    block = np.floor(cells.number / per_block).astype(np.int64)
+    first = np.flatnonzero(np.diff(block, prepend=-1))
+    blocks, edges = block[first], np.append(first, len(block))
+    lows = np.searchsorted(blocks, blocks - REFERENCE_SIDE)
+    highs = np.searchsorted(blocks, blocks + REFERENCE_SIDE, side="right")
+    places = np.searchsorted(thin, edges)
+    values = cells.level[thin]
     out = np.full(len(block), np.nan)
-    for k in np.unique(block):
-        low = np.searchsorted(block, k - REFERENCE_SIDE, side="left")
-        high = np.searchsorted(block, k + REFERENCE_SIDE, side="right")
-        if high - low < least:
-            continue
-        median = float(np.median(cells.level[low:high]))
-        floor = 0.0
-        if size is not None:
-            floor = _ROUNDING * float(np.median(size[low:high]))
-        if median > floor:
-            out[block == k] = median
+    for k, (low, high) in enumerate(zip(lows, highs, strict=True)):
+        part = values[places[low] : places[high]]
+        if edges[high] - edges[low] >= least and len(part):
+            middle = len(part) // 2
+            out[edges[k] : edges[k + 1]] = np.partition(part, middle)[middle]
     return out
 
 
@@ -109,9 +109,9 @@ def active_rows(
         ``snr`` (its ratio), ``lowest`` (of the row), ``amplitude``, ``tile_count``
         (cells), sorted by time.
     """
-    step = np.searchsorted(np.asarray(ladder, float), ratio.level, side="right")
-    kept = np.flatnonzero(step > 0)
-    number, level, step = ratio.number[kept], ratio.level[kept], step[kept]
+    kept = np.flatnonzero(ratio.level >= ladder[0])
+    number, level = ratio.number[kept], ratio.level[kept]
+    step = np.searchsorted(np.asarray(ladder, float), level, side="right")
     span = max(1.0, ratio.cell_s)
     second = np.floor(number * (ratio.cell_s / span) + 1e-9).astype(np.int64)
     new = np.ones(len(number), dtype=bool)

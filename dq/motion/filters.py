@@ -17,11 +17,6 @@ STOP_DB = 60.0
 #: Stop band of the rate halving, dB: aliases lie below the octave filters' own leak.
 ALIAS_DB = 80.0
 
-#: Highest frequency that a halved rate must carry undisturbed, and the lowest one that
-#: folds onto it, as shares of the rate before: an octave band ends with its transition
-#: at 2.3 times its lower edge, and a rate is at least 8 times that edge.
-_KEPT, _FOLDING = 2.3 / 16.0, 0.5 - 2.3 / 16.0
-
 
 def kaiser_half_length(transition: float, stop_db: float) -> int:
     """Give the half-length in samples of a Kaiser-windowed filter.
@@ -60,13 +55,27 @@ def low_pass(cut: float, half: int, stop_db: float) -> np.ndarray:
 
 
 def band_pass(low: float, high: float, half: int, stop_db: float) -> np.ndarray:
-    """Give a band-pass of gain 1 at the mean of its edges, without any gain at 0."""
-    n = np.arange(-half, half + 1)
+    """Give a band-pass and its quadrature, gain 1 at the mean of the edges.
+
+    For a tone in the band the squares of both outputs add up to its squared amplitude
+    at every moment, so the power can be sampled as slowly as it changes.
+
+    Returns
+    -------
+    ndarray, shape (2 half + 1, 2)
+        Neither has any gain at frequency 0.
+    """
+    n = np.arange(-half, half + 1).astype(float)
     shape = _window(half, stop_db)
-    taps = 2 * (high * np.sinc(2 * high * n) - low * np.sinc(2 * low * n)) * shape
+    safe = np.where(n == 0, 1.0, np.pi * n)
+    even = 2 * (high * np.sinc(2 * high * n) - low * np.sinc(2 * low * n)) * shape
     # what the stop band leaves at frequency 0 would turn an offset into a level
-    taps -= shape * (taps.sum() / shape.sum())
-    return taps / np.sum(taps * np.cos(np.pi * (low + high) * n))
+    even -= shape * (even.sum() / shape.sum())
+    odd = (np.cos(2 * np.pi * low * n) - np.cos(2 * np.pi * high * n)) / safe * shape
+    middle = np.pi * (low + high) * n
+    even /= np.sum(even * np.cos(middle))
+    odd /= np.sum(odd * np.sin(middle))
+    return np.stack([even, odd], axis=1)
 
 
 def differentiator(cut: float, half: int, stop_db: float) -> np.ndarray:
@@ -84,7 +93,7 @@ def differentiator(cut: float, half: int, stop_db: float) -> np.ndarray:
 
 
 def correlate(values: np.ndarray, taps: np.ndarray, step: int = 1) -> np.ndarray:
-    """Give ``y[k] = sum_j taps[j] values[step k + j]`` wherever all samples exist.
+    """Give ``y[k, c] = sum_j taps[j, c] values[step k + j]`` where all samples exist.
 
     Rows of the samples times a banded matrix: twice the multiplications, but the
     library's fast ones (measured: five times as fast as a plain correlation).
@@ -92,36 +101,73 @@ def correlate(values: np.ndarray, taps: np.ndarray, step: int = 1) -> np.ndarray
     Parameters
     ----------
     values : ndarray, shape (n,)
-    taps : ndarray, shape (m,)
+    taps : ndarray, shape (m, c)
     step : int
 
     Returns
     -------
-    ndarray of float64, shape (max((n - m) // step + 1, 0),)
+    ndarray of float64, shape (max((n - m) // step + 1, 0), c)
     """
-    count = (len(values) - len(taps)) // step + 1
+    length, columns = taps.shape
+    count = (len(values) - length) // step + 1
     if count <= 0:
-        return np.zeros(0)
-    width = step * -(-max(len(taps) - step, 32) // step)
+        return np.zeros((0, columns))
+    width = step * -(-max(length - step, 32) // step)
     per_row = width // step
     rows = -(-count // per_row)
-    padded = np.zeros((rows + 1, width))
+    padded = np.empty((rows + 1, width))
     used = min(len(values), padded.size)
     padded.ravel()[:used] = values[:used]
-    matrix = np.zeros((2 * width, per_row))
+    padded.ravel()[used:] = 0.0
+    matrix = np.zeros((2 * width, per_row, columns))
     for k in range(per_row):
-        matrix[k * step : k * step + len(taps), k] = taps
+        matrix[k * step : k * step + length, k] = taps
+    matrix = matrix.reshape(2 * width, -1)
     out = padded[:-1] @ matrix[:width]
     out += padded[1:] @ matrix[width:]
-    return out.ravel()[:count]
+    return out.reshape(-1, columns)[:count]
 
 
-_HALVER_HALF = kaiser_half_length(_FOLDING - _KEPT, ALIAS_DB)
-_HALVER = low_pass(0.25, _HALVER_HALF, ALIAS_DB)
+def centred(
+    values: np.ndarray, number: int, taps: np.ndarray, step: int
+) -> tuple[np.ndarray, int]:
+    """Filter around the samples whose numbers are multiples of ``step``.
+
+    Parameters
+    ----------
+    values : ndarray, shape (n,)
+    number : int
+        Of the first sample.
+    taps : ndarray, shape (2 half + 1, c)
+    step : int
+
+    Returns
+    -------
+    out : ndarray, shape (k, c)
+    first : int
+        Number of the first output at the rate / step.
+    """
+    half = len(taps) // 2
+    first = -(-(number + half) // step)
+    return correlate(values[step * first - half - number :], taps, step), first
+
+
+def _rate_divider(factor: int) -> np.ndarray:
+    kept, folding = 2.3 / (8.0 * factor), 1.0 / factor - 2.3 / (8.0 * factor)
+    half = kaiser_half_length(folding - kept, ALIAS_DB)
+    return low_pass(0.5 / factor, half, ALIAS_DB)[:, None]
+
+
+#: Low-pass before the rate is divided by 2 or by 4. The divided rate carries its lower
+#: 2.3 eighths undisturbed: an octave band ends with its transition at 2.3 times its
+#: lower edge, and is filtered at 8 times that edge at least.
+_DIVIDERS = {2: _rate_divider(2), 4: _rate_divider(4)}
 
 
 class Halvings:
     """A stretch of samples at its own rate, half of it, a quarter, as asked for.
+
+    Levels are asked for in rising order; one that nobody asks for costs nothing.
 
     Parameters
     ----------
@@ -132,18 +178,19 @@ class Halvings:
     """
 
     def __init__(self, values: np.ndarray, number: int):
-        self._levels = [(values, number)]
+        self._levels = {0: (values, number)}
 
     def level(self, m: int) -> tuple[np.ndarray, int]:
         """Give the samples at the rate / 2^m, and the number of the first there."""
-        while len(self._levels) <= m:
-            values, number = self._levels[-1]
-            first = -(-(number + _HALVER_HALF) // 2)
-            start = 2 * first - _HALVER_HALF - number
-            self._levels.append((correlate(values[start:], _HALVER, 2), first))
+        while m not in self._levels:
+            have = max(k for k in self._levels if k < m)
+            factor = 2 if m - have == 1 else 4
+            values, number = self._levels[have]
+            out, first = centred(values, number, _DIVIDERS[factor], factor)
+            self._levels[have + factor // 2] = (out[:, 0], first)
         return self._levels[m]
 
 
 def halving_reach(m: int) -> float:
-    """Give how far m halvings reach to each side, in samples of the full rate."""
-    return _HALVER_HALF * (2.0**m - 1.0)
+    """Give how far m halvings reach to each side at most, in samples of the rate."""
+    return max(len(taps) // 2 / (f - 1) for f, taps in _DIVIDERS.items()) * 2.0**m

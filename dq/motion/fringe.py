@@ -16,7 +16,7 @@ from dq.motion.activity import Cells, active_rows
 from dq.motion.filters import (
     STOP_DB,
     Halvings,
-    correlate,
+    centred,
     differentiator,
     halving_reach,
     kaiser_half_length,
@@ -160,10 +160,10 @@ def speed_extremes(
         taps = low_pass(cut, half, STOP_DB) * source.scale
     else:
         taps = differentiator(cut, half, STOP_DB) * (rate * source.scale)
-    v = correlate(values, taps)
-    first, bounds = whole_cells(len(v), number + half, FRINGE_CELL_S, rate)
-    # a rate below 8 Hz has cells without samples, which whole_cells cannot see
-    if len(bounds) < 2 or np.any(np.diff(bounds) < 1):
+    out, number = centred(values, number, taps[:, None], 1)
+    v = out[:, 0]
+    first, bounds = whole_cells(len(v), number, FRINGE_CELL_S, rate)
+    if len(bounds) < 2:
         return first, np.zeros(0), np.zeros(0)
     v = v[: bounds[-1]]
     low = np.minimum.reduceat(v, bounds[:-1])

@@ -1,9 +1,9 @@
 """Band-limited RMS in octave bands, on cells of a fixed GPS grid.
 
-A band's samples come from a finite band-pass at the lowest halved rate that carries it;
-their squares are averaged over cells, and cells over a Hann window of two periods of
-the band's lower edge. The edges of a band are where the power is halved, so white noise
-of density S has the level sqrt(S (high - low)), and a tone inside A / sqrt(2).
+A finite band-pass and its quadrature, at the lowest halved rate that carries the band,
+give its power; the power is averaged over cells, and cells over a Hann window of two
+periods of the band's lower edge. At the edges of a band the power is halved, so white
+noise of density S has the level sqrt(S (high - low)), and a tone inside A / sqrt(2).
 """
 
 from __future__ import annotations
@@ -16,7 +16,7 @@ from dq.motion.filters import (
     STOP_DB,
     Halvings,
     band_pass,
-    correlate,
+    centred,
     halving_reach,
     kaiser_half_length,
 )
@@ -29,8 +29,8 @@ TRANSITION = 0.5
 #: as much power as a sharp edge would (integral of x^2 over 0..1 is 1/3, not 1/2).
 _OUTWARD = 1.0 / 6.0
 
-#: Rate over lower edge that a band needs: squares of its samples reach 4.6 times the
-#: lower edge and must not fold back to 0.
+#: Rate over lower edge that a band needs: its transition ends at 2.3 times that edge,
+#: and what lies above half the rate must not fold into it.
 RATE_OVER_LOW = 8.0
 
 #: Shortest cell, s (own choice: strain transients are matched to fractions of a
@@ -39,6 +39,10 @@ SHORTEST_CELL_S = 0.5
 
 #: Cells per period of the lower edge.
 _CELLS_PER_PERIOD = 4
+
+#: Levels below this share of the largest sample are rounding, not motion: filters in
+#: double precision leave parts in 1e15, samples in single precision parts in 1e8.
+_ROUNDING = 1e-9
 
 
 def octave_bands(
@@ -74,8 +78,10 @@ class BandPlan:
     low_hz, high_hz : float
     halvings : int
         The band is filtered at the rate / 2^halvings.
-    taps : ndarray
-        Its band-pass there.
+    taps : ndarray, shape (n, 2)
+        Its band-pass there, and the quadrature.
+    step : int
+        The power is sampled at the rate / 2^halvings / step.
     cell_s : float
         Levels are given for cells ``[k cell_s, (k + 1) cell_s)`` of GPS time.
     weights : ndarray
@@ -88,6 +94,7 @@ class BandPlan:
     high_hz: float
     halvings: int
     taps: np.ndarray
+    step: int
     cell_s: float
     weights: np.ndarray
     reach_s: float
@@ -115,9 +122,10 @@ def _plan(low: float, high: float, sample_rate: float) -> BandPlan:
     taps = band_pass(*edges, half, STOP_DB)
     cell = max(1.0 / (_CELLS_PER_PERIOD * low), SHORTEST_CELL_S)
     side = max(round(1.0 / (low * cell)) - 1, 0)
+    step = max(k for k in (1, 2, 4) if k == 1 or rate / k * cell >= 1.0)
     hann = np.hanning(2 * side + 3)[1:-1]
     reach = half / rate + halving_reach(m) / sample_rate + (side + 1) * cell
-    return BandPlan(low, high, m, taps, cell, hann / hann.sum(), reach)
+    return BandPlan(low, high, m, taps, step, cell, hann / hann.sum(), reach)
 
 
 def cell_bounds(first: int, last: int, cell_s: float, rate: float) -> np.ndarray:
@@ -171,16 +179,16 @@ def band_rms(
         RMS in the channel's unit; empty when the stretch is too short.
     """
     values, number = stretch.level(plan.halvings)
-    rate = sample_rate / 2**plan.halvings
-    y = correlate(values, plan.taps)
-    number += len(plan.taps) // 2
+    rate = sample_rate / 2**plan.halvings / plan.step
+    y, number = centred(values, number, plan.taps, plan.step)
     first, bounds = whole_cells(len(y), number, plan.cell_s, rate)
     side = len(plan.weights) // 2
     if len(bounds) < 2 * side + 2:
         return first + side, np.zeros(0)
-    square = np.add.reduceat(y * y, bounds[:-1])
-    if bounds[-1] < len(y):
-        tail = y[bounds[-2] : bounds[-1]]
-        square[-1] = tail @ tail
-    mean = square / np.diff(bounds)
-    return first + side, np.sqrt(np.convolve(mean, plan.weights, mode="valid"))
+    y = y[: bounds[-1]]
+    power = np.add.reduceat(np.einsum("kc,kc->k", y, y), bounds[:-1])
+    # a tone's power is half of its squared amplitude
+    mean = 0.5 * power / np.diff(bounds)
+    level = np.sqrt(np.convolve(mean, plan.weights, mode="valid"))
+    level[level < _ROUNDING * np.max(np.abs(values))] = 0.0
+    return first + side, level

@@ -205,12 +205,11 @@ class _Track:
         if not self.number:
             return (np.zeros(0, np.int64), *(np.zeros(0) for _ in range(columns)))
         number = np.concatenate(self.number)
-        order = np.argsort(number, kind="stable")
-        joined = [
-            np.concatenate([c[k] for c in self.columns]).astype(float)[order]
-            for k in range(columns)
-        ]
-        return (number[order], *joined)
+        joined = [np.concatenate([c[k] for c in self.columns]) for k in range(columns)]
+        if np.any(np.diff(number) < 0):
+            order = np.argsort(number, kind="stable")
+            number, joined = number[order], [c[order] for c in joined]
+        return (number, *joined)
 
 
 class MotionRun:
@@ -229,7 +228,8 @@ class MotionRun:
         self.plan = plan
         self.rate = Fraction(rate)
         self.batch_ns = batch_ns
-        self.bands: list[BandPlan] = plan_bands(list(plan.bands), float(rate))
+        # highest first, as the halvings go
+        self.bands: list[BandPlan] = plan_bands(list(plan.bands)[::-1], float(rate))
         self._levels = [_Track(band.cell_s) for band in self.bands]
         self._speed = _Track(FRINGE_CELL_S)
         self._done: set[int] = set()
@@ -270,15 +270,11 @@ class MotionRun:
         for band, track in zip(self.bands, self._levels, strict=True):
             first, level = band_rms(stretch, band, rate)
             low, high = _cells_in(start_ns, end_ns, band.cell_s)
-            if len(level):
-                values, number = stretch.level(band.halvings)
-                size = _sizes(values, number, first, len(level), band, rate)
-                track.add(first, low, high, level, size)
+            track.add(first, low, high, level)
         if self.plan.source:
             first, slowest, fastest = speed_extremes(stretch, self.plan.source, rate)
             low, high = _cells_in(start_ns, end_ns, FRINGE_CELL_S)
-            if len(slowest):
-                self._speed.add(first, low, high, slowest, fastest)
+            self._speed.add(first, low, high, slowest, fastest)
 
     def read_around(self, data, ready: Segments, span: Segments) -> None:
         """Read what lies beyond the batches and yet counts for the running medians."""
@@ -317,11 +313,12 @@ class MotionRun:
         return out
 
     def _level_table(self, band: BandPlan, track: _Track, wanted) -> Derived:
-        number, level, size = track.gathered(2)
+        number, level = track.gathered(1)
         cells = Cells(number, level, band.cell_s)
         least = int(np.ceil(LEAST_PERIODS / (band.low_hz * band.cell_s)))
-        reference = block_reference(cells, least=least, size=size)
-        known = np.isfinite(reference) & _whole_in(cells, wanted)
+        reference = block_reference(cells, least=least)
+        # a median of 0 is a sensor at rest: no level can be told from it
+        known = (reference > 0) & _inside(number, band.cell_s, wanted)
         cells, reference = cells.take(known), reference[known]
         table = active_rows(
             Cells(cells.number, cells.level / reference, band.cell_s),
@@ -346,10 +343,10 @@ class MotionRun:
     def _speed_cells(self, wanted: Segments) -> Cells:
         number, low, high = self._speed.gathered(2)
         middle = Cells(number, 0.5 * (low + high), FRINGE_CELL_S)
-        offset = _offset(middle)
+        offset = block_reference(middle, least=_LEAST_OFFSET_CELLS)
         speed = np.maximum(np.abs(low - offset), np.abs(high - offset))
         cells = Cells(number, speed, FRINGE_CELL_S)
-        return cells.take(np.isfinite(speed) & _whole_in(cells, wanted))
+        return cells.take(np.isfinite(speed) & _inside(number, FRINGE_CELL_S, wanted))
 
     def _fringe(self, cells: Cells, passes: int) -> Derived:
         plan = self.plan
@@ -376,41 +373,31 @@ def _cells_in(start_ns: int, end_ns: int, cell_s: float) -> tuple[int, int]:
     return -(-start_ns // cell), -(-end_ns // cell)
 
 
-def _sizes(values, number, first, count, band: BandPlan, rate: float) -> np.ndarray:
-    """Give the size of the samples at the start of each cell of a level."""
-    at = np.floor((first + np.arange(count)) * (band.cell_s * rate / 2**band.halvings))
-    at = np.clip(at.astype(np.int64) - number, 0, len(values) - 1)
-    return np.abs(values[at])
-
-
-def _offset(middle: Cells) -> np.ndarray:
-    """Give the running median of a signed velocity: what the sensor reads at rest."""
-    block = np.floor(middle.number * (middle.cell_s / REFERENCE_BLOCK_S))
-    out = np.full(len(block), np.nan)
-    for k in np.unique(block):
-        low = np.searchsorted(block, k - REFERENCE_SIDE, side="left")
-        high = np.searchsorted(block, k + REFERENCE_SIDE, side="right")
-        if high - low >= _LEAST_OFFSET_CELLS:
-            out[block == k] = np.median(middle.level[low:high])
-    return out
-
-
-def _bounds_ns(cells: Cells) -> tuple[np.ndarray, np.ndarray]:
-    start = np.round(cells.number * cells.cell_s * 1e6).astype(np.int64) * 1000
-    end = np.round((cells.number + 1) * cells.cell_s * 1e6).astype(np.int64) * 1000
-    return start, end
-
-
-def _whole_in(cells: Cells, time: Segments) -> np.ndarray:
-    start, end = _bounds_ns(cells)
-    index = np.searchsorted(time.starts, start, side="right") - 1
-    if len(time.ends) == 0:
-        return np.zeros(len(start), dtype=bool)
-    return (index >= 0) & (end <= time.ends[np.maximum(index, 0)])
+def _inside(number: np.ndarray, cell_s: float, time: Segments) -> np.ndarray:
+    """Say which cells lie in some time as a whole."""
+    inside = np.zeros(len(number), dtype=bool)
+    cell = Fraction(cell_s) * _NS
+    for start, end in time:
+        low, high = np.searchsorted(number, [-(-start // cell), end // cell])
+        inside[low:high] = True
+    return inside
 
 
 def _time_of(cells: Cells) -> Segments:
-    return Segments.from_arrays(*_bounds_ns(cells))
+    number = cells.number
+    if len(number) == 0:
+        return Segments.none()
+    last = np.append(np.flatnonzero(np.diff(number) != 1), len(number) - 1)
+    first = np.append(0, last[:-1] + 1)
+    return Segments.from_arrays(
+        _start_ns(number[first], cells.cell_s),
+        _start_ns(number[last] + 1, cells.cell_s),
+    )
+
+
+def _start_ns(number: np.ndarray, cell_s: float) -> np.ndarray:
+    # whole microseconds, as the tables have them
+    return np.round(number * cell_s * 1e6).astype(np.int64) * 1000
 
 
 def _conformed(table: pd.DataFrame) -> pd.DataFrame:
