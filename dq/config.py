@@ -228,7 +228,7 @@ class Witnesses(_Section):
         min_length=1,
         max_length=50,
         description="ladder on a band's level over its running median (own choice: "
-        "noise is above 2 for less than a hundredth of the time)",
+        "white noise is above 2 for one to three hundredths of the time)",
     )
     fringe_passes: list[int] = Field(
         default=[1, 2, 4],

@@ -18,6 +18,10 @@ STOP_DB = 60.0
 ALIAS_DB = 80.0
 
 
+#: Rounds that place the flanks; each leaves about a tenth of the error.
+_ROUNDS = 8
+
+
 def kaiser_half_length(transition: float, stop_db: float) -> int:
     """Give the half-length in samples of a Kaiser-windowed filter.
 
@@ -58,20 +62,39 @@ def band_pass(low: float, high: float, half: int, stop_db: float) -> np.ndarray:
     """Give a band-pass and its quadrature, gain 1 at the mean of the edges.
 
     For a tone in the band the squares of both outputs add up to its squared amplitude
-    at every moment, so the power can be sampled as slowly as it changes.
+    at every moment, so the power can be sampled as slowly as it changes. The flanks are
+    placed such that white noise passes as through sharp edges.
+
+    Parameters
+    ----------
+    low, high : float
+        Edges over the sample rate.
+    half : int
+        Half-length in samples.
+    stop_db : float
 
     Returns
     -------
     ndarray, shape (2 half + 1, 2)
-        Neither has any gain at frequency 0.
+        Neither column answers to an offset or a ramp.
     """
+    outward, width = 0.0, high - low
+    for _ in range(_ROUNDS):
+        taps = _flanked(low - outward, high + outward, half, stop_db)
+        # white noise of unit variance has the density 2 over the rate
+        outward += (width - 0.5 * np.sum(taps[:, 0] ** 2)) / 2
+    return taps
+
+
+def _flanked(low: float, high: float, half: int, stop_db: float) -> np.ndarray:
     n = np.arange(-half, half + 1).astype(float)
     shape = _window(half, stop_db)
     safe = np.where(n == 0, 1.0, np.pi * n)
     even = 2 * (high * np.sinc(2 * high * n) - low * np.sinc(2 * low * n)) * shape
-    # what the stop band leaves at frequency 0 would turn an offset into a level
-    even -= shape * (even.sum() / shape.sum())
     odd = (np.cos(2 * np.pi * low * n) - np.cos(2 * np.pi * high * n)) / safe * shape
+    # what the stop band leaves of an offset and of a ramp would be called a level
+    even -= shape * (even.sum() / shape.sum())
+    odd -= shape * n * (np.sum(odd * n) / np.sum(shape * n**2))
     middle = np.pi * (low + high) * n
     even /= np.sum(even * np.cos(middle))
     odd /= np.sum(odd * np.sin(middle))

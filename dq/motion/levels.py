@@ -2,8 +2,8 @@
 
 A finite band-pass and its quadrature, at the lowest halved rate that carries the band,
 give its power; the power is averaged over cells, and cells over a Hann window of two
-periods of the band's lower edge. At the edges of a band the power is halved, so white
-noise of density S has the level sqrt(S (high - low)), and a tone inside A / sqrt(2).
+periods of the band's lower edge. White noise of density S has the level
+sqrt(S (high - low)), and a tone of amplitude A inside the band A / sqrt(2).
 """
 
 from __future__ import annotations
@@ -24,10 +24,6 @@ from dq.motion.filters import (
 #: Transition of a band's filter over its lower edge. Half keeps the neighbouring
 #: octave's middle out at 60 dB and settles within 3.7 periods of the edge (own choice).
 TRANSITION = 0.5
-
-#: Edges are moved outward by this share of the transition: a linear flank then passes
-#: as much power as a sharp edge would (integral of x^2 over 0..1 is 1/3, not 1/2).
-_OUTWARD = 1.0 / 6.0
 
 #: Rate over lower edge that a band needs: its transition ends at 2.3 times that edge,
 #: and what lies above half the rate must not fold into it.
@@ -118,8 +114,7 @@ def _plan(low: float, high: float, sample_rate: float) -> BandPlan:
     rate = sample_rate / 2**m
     width = TRANSITION * low
     half = kaiser_half_length(width / rate, STOP_DB)
-    edges = (low - _OUTWARD * width) / rate, (high + _OUTWARD * width) / rate
-    taps = band_pass(*edges, half, STOP_DB)
+    taps = band_pass(low / rate, high / rate, half, STOP_DB)
     cell = max(1.0 / (_CELLS_PER_PERIOD * low), SHORTEST_CELL_S)
     side = max(round(1.0 / (low * cell)) - 1, 0)
     step = max(k for k in (1, 2, 4) if k == 1 or rate / k * cell >= 1.0)
