@@ -70,9 +70,10 @@ def test_a_planted_swing_is_found_from_its_start_to_its_end(ground):
     active = (fringe.gps_end - fringe.gps_start).sum()
     assert active == pytest.approx(60 * 2 / np.pi * np.arccos(10 / top), rel=0.08)
     level = found["OV-A@rms-0.125-0.25Hz"].transients
-    loud = level[level.snr > 6]
-    assert loud.gps_start.min() == pytest.approx(GPS + 3000, abs=12)
-    assert loud.gps_end.max() == pytest.approx(GPS + 3060, abs=12)
+    # half the level is reached at the edges, blurred by two periods of the lower edge
+    loud = level[level.snr > level.snr.max() / 2]
+    assert loud.gps_start.min() == pytest.approx(GPS + 3000, abs=5)
+    assert loud.gps_end.max() == pytest.approx(GPS + 3060, abs=5)
     assert loud.amplitude.max() == pytest.approx(10 / np.sqrt(2), rel=0.05)
     assert np.all(level.q == np.sqrt(2))
     for name in ("OV-A@rms-1-2Hz", "OV-A@rms-2-4Hz"):
