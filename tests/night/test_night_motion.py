@@ -99,6 +99,10 @@ def test_ranges_agree_on_their_overlap(ground):
         rows += len(a)
         span = Segments.of([((GPS + 2504) * NS, (GPS + 3296) * NS)])
         assert one.analysed & span == two.analysed & span == span
+        asked = Segments.of([((GPS + 2500) * NS, (GPS + 3300) * NS)])
+        assert not two.analysed - asked
+        assert two.transients.gps_start.min() >= GPS + 2500
+        assert two.transients.gps_end.max() <= GPS + 3300
     assert rows > 150
 
 
