@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import re
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 
@@ -132,6 +133,15 @@ def _halvings(sample_rate: float) -> int:
     return max(int(np.floor(np.log2(sample_rate / _RATE_HZ) + 1e-9)), 0)
 
 
+@cache
+def _speed_taps(source: FringeSource, rate: float) -> np.ndarray:
+    half = kaiser_half_length(_TRANSITION_HZ / rate, STOP_DB)
+    cut = (MOTION_TOP_HZ + _TRANSITION_HZ / 2) / rate
+    if source.velocity:
+        return low_pass(cut, half, STOP_DB)[:, None] * source.scale
+    return differentiator(cut, half, STOP_DB)[:, None] * (rate * source.scale)
+
+
 def speed_extremes(
     stretch: Halvings, source: FringeSource, sample_rate: float
 ) -> tuple[int, np.ndarray, np.ndarray]:
@@ -154,13 +164,8 @@ def speed_extremes(
     m = _halvings(sample_rate)
     values, number = stretch.level(m)
     rate = sample_rate / 2**m
-    half = kaiser_half_length(_TRANSITION_HZ / rate, STOP_DB)
-    cut = (MOTION_TOP_HZ + _TRANSITION_HZ / 2) / rate
-    if source.velocity:
-        taps = low_pass(cut, half, STOP_DB) * source.scale
-    else:
-        taps = differentiator(cut, half, STOP_DB) * (rate * source.scale)
-    out, number = centred(values, number, taps[:, None], 1)
+    taps = _speed_taps(source, rate)
+    out, number = centred(values, number, taps, 1)
     v = out[:, 0]
     first, bounds = whole_cells(len(v), number, FRINGE_CELL_S, rate)
     if len(bounds) < 2:

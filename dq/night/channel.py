@@ -27,7 +27,8 @@ from dq.night.blocks import (
     plan_blocks,
 )
 from dq.night.fault_log import FaultLog
-from dq.night.motion import Derived, MotionPlan, MotionRun
+from dq.night.motion import Derived, MotionRun
+from dq.night.motion_plan import MotionPlan
 from dq.night.spectra import FrameSpectra
 from dq.night.stream import Piece, SampleWindow
 from dq.segments import Segments

@@ -11,7 +11,7 @@ from dq.config import digest
 from dq.errors import DqError, NoDataError
 from dq.night.code import ENGINE, code_digest
 from dq.night.inputs import Inputs, check_strain_time
-from dq.night.motion import MotionPlan, plan_motion, strain_edge
+from dq.night.motion_plan import MotionPlan, plan_motion, strain_edge
 from dq.night.pool import Task
 from dq.night.products import parts_of, product_data, product_rows
 from dq.night.state import state_path

@@ -33,7 +33,7 @@ from dq.night.folder import LOST
 from dq.segments import Segments
 
 if TYPE_CHECKING:
-    from dq.night.motion import MotionPlan
+    from dq.night.motion_plan import MotionPlan
     from dq.night.products import ProductData
     from dq.store import ChannelData
 

@@ -24,7 +24,7 @@ from memory_channel import NS, MemoryChannel
 
 from dq.config import parse_config
 from dq.night.channel import analyse_channel
-from dq.night.motion import plan_motion
+from dq.night.motion_plan import plan_motion
 from dq.store import Channel
 
 GPS = 1_420_000_000 - 1_420_000_000 % 1024

@@ -9,7 +9,7 @@ from dq.config import parse_config
 from dq.errors import ConfigError
 from dq.night.channel import analyse_channel
 from dq.night.ledger import make_ledger
-from dq.night.motion import plan_motion
+from dq.night.motion_plan import plan_motion
 from dq.night.state import load_state, save_state
 from dq.segments import Segments
 from dq.store import Channel
@@ -232,3 +232,46 @@ def test_each_kind_has_its_ladder():
         config(products=[{"fast": "OV-A", "slow": "OV-A"}])
     with pytest.raises(ConfigError, match="nearest known key is 'slow_max_rate_hz'"):
         config(slow_max_rate=3)
+
+
+def test_check_says_what_is_derived(small_site):
+    from dq.config import load_config
+    from dq.night.check import check_inputs
+    from dq.night.inputs import read_inputs
+
+    path = small_site(
+        dead=False, extra='[[witnesses.products]]\nfast = "OV-A"\nslow = "OV-B"\n'
+    )
+    (path.parent / "channels.csv").write_text(
+        "channel,role,safe,quantity,unit\nOV-STRAIN,strain,,,\n"
+        "OV-A,auxiliary,,displacement,um\nOV-B,auxiliary,,velocity,count\n"
+    )
+    text = check_inputs(read_inputs(load_config(path))).text()
+    assert "level in octave bands  2: OV-A, OV-B" in text
+    assert "fringe frequency       1: OV-A\n" in text
+    assert "products               OV-A@product-OV-B\n" in text
+    assert "derived witnesses      20\n" in text
+    assert "odd: OV-B: no fringe frequency: unit 'count' is no velocity" in text
+
+
+def test_a_new_setting_of_the_motion_makes_a_new_state(small_site, tmp_path):
+    from dq.config import load_config
+    from dq.night.inputs import read_inputs
+    from dq.night.plan import plan_night
+
+    path = small_site(dead=False)
+    text = path.read_text()
+
+    def keys(extra):
+        path.write_text(text + extra)
+        inputs = read_inputs(load_config(path))
+        start = 1420000000 * NS
+        plan = plan_night(inputs, start, start + 200 * NS, tmp_path)
+        return {t.channel: t.key for t in plan.tasks}
+
+    before = keys("")
+    after = keys("[witnesses]\nrms_high_hz = 8\n")
+    assert before["OV-STRAIN"] == after["OV-STRAIN"]
+    assert before["OV-A"] != after["OV-A"]
+    # what only the statistics use leaves the channels' results as they are
+    assert keys("[witnesses]\nmin_coincidences = 4\n") == before
