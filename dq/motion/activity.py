@@ -110,7 +110,7 @@ def active_rows(
         (cells), sorted by time.
     """
     kept = np.flatnonzero(ratio.level >= ladder[0])
-    number, level = ratio.number[kept], ratio.level[kept]
+    number, level = ratio.number[kept], ratio.level[kept].astype(float)
     step = np.searchsorted(np.asarray(ladder, float), level, side="right")
     span = max(1.0, ratio.cell_s)
     second = np.floor(number * (ratio.cell_s / span) + 1e-9).astype(np.int64)
