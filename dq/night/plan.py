@@ -13,10 +13,11 @@ from dq.night.code import ENGINE, code_digest
 from dq.night.inputs import Inputs, check_strain_time
 from dq.night.motion_plan import MotionPlan, plan_motion, strain_edge
 from dq.night.pool import Task
-from dq.night.products import parts_of, product_data, product_rows
+from dq.night.products import product_data, product_rows
 from dq.night.state import state_path
 from dq.segments import Segments
 from dq.store import Channel
+from dq.tables import recordings_of
 
 _NS = 1_000_000_000
 
@@ -114,15 +115,10 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
     contents = {
         name: inputs.store.content_id(name, plan.reach)
         for t in plan.tasks
-        for name in _recordings(t.channel)
+        for name in recordings_of(t.channel)
     }
     plan.inputs_sha256 = _sha256(inputs.texts, contents)
     return plan
-
-
-def _recordings(name: str) -> tuple[str, ...]:
-    """Give the recorded channels that a channel rests on."""
-    return parts_of(name) if "@" in name else (name,)
 
 
 def _task(plan: NightPlan, row: Channel, state: Path) -> Task:
@@ -172,7 +168,7 @@ def _key(plan: NightPlan, row: Channel, motion: MotionPlan | None) -> str:
         [row.f_low_hz, row.f_high_hz],
         [plan.start_ns, plan.end_ns],
         [ready.starts.tolist(), ready.ends.tolist()],
-        [inputs.store.fingerprint(n, plan.reach) for n in _recordings(row.name)],
+        [inputs.store.fingerprint(n, plan.reach) for n in recordings_of(row.name)],
         motion.key() if motion else None,
     )
 

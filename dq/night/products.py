@@ -18,6 +18,7 @@ from dq.motion.product import INTERPOLATION_HALF
 from dq.night.inputs import Inputs, nearest
 from dq.segments import Segments
 from dq.store import Channel
+from dq.tables import recordings_of
 
 if TYPE_CHECKING:
     from dq.store import ChannelData
@@ -63,12 +64,6 @@ def product_rows(inputs: Inputs) -> list[Channel]:
     return rows
 
 
-def parts_of(name: str) -> tuple[str, str]:
-    """Give the fast and the slow channel of a product's name."""
-    fast, _, slow = name.partition("@product-")
-    return fast, slow
-
-
 def product_data(inputs: Inputs, name: str) -> ProductData:
     """Give the samples of a product.
 
@@ -79,7 +74,7 @@ def product_data(inputs: Inputs, name: str) -> ProductData:
     ChannelError
         The rates of one change, or the fast one's is not the higher.
     """
-    parts = parts_of(name)
+    parts = recordings_of(name)
     for part in parts:
         if part not in inputs.store.channels:
             raise NoDataError(f"{part!r}: {inputs.why_absent(part)}")
