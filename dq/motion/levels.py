@@ -9,6 +9,7 @@ sqrt(S (high - low)), and a tone of amplitude A inside the band A / sqrt(2).
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 
@@ -109,6 +110,7 @@ def plan_bands(bands: list[tuple[float, float]], sample_rate: float) -> list[Ban
     return [_plan(low, high, sample_rate) for low, high in bands]
 
 
+@cache
 def _plan(low: float, high: float, sample_rate: float) -> BandPlan:
     m = max(int(np.floor(np.log2(sample_rate / (RATE_OVER_LOW * low)) + 1e-9)), 0)
     rate = sample_rate / 2**m
@@ -180,8 +182,8 @@ def band_rms(
     side = len(plan.weights) // 2
     if len(bounds) < 2 * side + 2:
         return first + side, np.zeros(0)
-    y = y[: bounds[-1]]
-    power = np.add.reduceat(np.einsum("kc,kc->k", y, y), bounds[:-1])
+    # both columns of a sample lie side by side
+    power = np.add.reduceat(np.square(y[: bounds[-1]]).ravel(), 2 * bounds[:-1])
     # a tone's power is half of its squared amplitude
     mean = 0.5 * power / np.diff(bounds)
     level = np.sqrt(np.convolve(mean, plan.weights, mode="valid"))

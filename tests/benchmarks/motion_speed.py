@@ -1,9 +1,8 @@
 """CPU time of the derived channels over the transient finder's on the same channel.
 
 ``python tests/benchmarks/motion_speed.py [RATE ...]`` prints, for each sample rate, the
-CPU time of levels and fringe frequencies (what ``MotionRun`` does, reading left out,
-since it takes the finder's samples) and that of the finder, and how exactly the range
-matters.
+CPU time of levels and fringe frequencies and that of the finder. Both take the same
+samples, so reading counts for neither.
 """
 
 from __future__ import annotations
