@@ -9,6 +9,7 @@ tiles         multi-Q tile plan and normalised tile energies
 transients    loud tiles gathered into transients
 features      numbers that tell families of transients apart
 families      the sorter of families, trained from labels
+motion        slow motion: levels in octave bands, fringe frequency, products
 witnesses     which auxiliary channels saw the strain's transients, beyond chance
 vetoes        faults and witnesses turned into segments under a dead-time budget
 cost          what a set of veto segments removes, and for how much time
@@ -39,6 +40,8 @@ _FACES = {
     "read_channel_list": "dq.store",
     "analyse_channel": "dq.night.channel",
     "measure": "dq.features",
+    "fringe_frequency": "dq.motion",
+    "band_rms": "dq.motion",
     "find_witnesses": "dq.witnesses",
     "build_vetoes": "dq.vetoes",
     "choose_vetoes": "dq.vetoes",

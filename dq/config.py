@@ -173,6 +173,16 @@ class Families(_Section):
     )
 
 
+_CHANNEL = r"^[A-Za-z0-9][A-Za-z0-9:_.\-]{0,254}$"
+
+
+class Product(_Section):
+    """Two auxiliary channels whose product may be heard in the strain."""
+
+    fast: str = Field(pattern=_CHANNEL, description="the channel with the higher rate")
+    slow: str = Field(pattern=_CHANNEL, description="the channel that modulates it")
+
+
 class Witnesses(_Section):
     """Which auxiliary channels explain the strain's transients."""
 
@@ -201,6 +211,66 @@ class Witnesses(_Section):
         le=1000,
         description="fewer coincidences never accept a channel (own choice)",
     )
+    slow_max_rate_hz: float = Field(
+        default=256.0,
+        ge=0.0,
+        le=65536.0,
+        description="Hz; channels up to this rate are watched for their level in "
+        "octave bands; 0 = none (common practice: position and ground sensors are "
+        "recorded at 16 to 256 Hz)",
+    )
+    rms_low_hz: float = Field(
+        default=0.0625,
+        ge=0.01,
+        le=1000.0,
+        description="Hz; the octave bands start here (own choice: 0.1 Hz, where motion "
+        "begins to drive scattered light, lies inside the lowest)",
+    )
+    rms_high_hz: float = Field(
+        default=16.0,
+        ge=0.02,
+        le=10000.0,
+        description="Hz; and end here or below: 8 octaves. Above, the transient finder "
+        "watches (own choice)",
+    )
+    rms_thresholds: list[float] = Field(
+        default=[2.0, 3.0, 4.5, 6.5, 10.0, 15.0, 25.0, 50.0],
+        min_length=1,
+        max_length=50,
+        description="ladder on a band's level over its running median (own choice: "
+        "white noise is above 2 for one to three hundredths of the time)",
+    )
+    fringe_passes: list[int] = Field(
+        default=[1, 2, 4],
+        max_length=16,
+        description="how often light may meet a moving surface, n of 2 n |v| / lambda; "
+        "empty = no fringe frequency (own choice: doublings, the ladder lies between)",
+    )
+    fringe_thresholds: list[float] = Field(
+        default=[1.0, 1.5, 2.0, 3.0, 4.0, 6.0, 9.0],
+        min_length=1,
+        max_length=50,
+        description="ladder on the predicted fringe frequency over the strain band's "
+        "lower edge (own choice; 1 is the edge)",
+    )
+    wavelength_nm: float = Field(
+        default=1064.0,
+        ge=100.0,
+        le=20000.0,
+        description="nm; wavelength of the interferometer's light (common practice)",
+    )
+    products: list[Product] = Field(
+        default=[],
+        max_length=1000,
+        description="pairs of channels whose product is searched as well",
+    )
+
+    def ladder(self, channel: str) -> list[float]:
+        """Give the ladder of thresholds for a channel; derived ones have their own."""
+        kind = channel.partition("@")[2].partition("-")[0]
+        if kind == "rms":
+            return self.rms_thresholds
+        return self.fringe_thresholds if kind == "fringe" else self.snr_thresholds
 
 
 class Vetoes(_Section):
@@ -286,6 +356,16 @@ def parse_config(raw: dict, *, base: Path = Path("."), where: str = "config") ->
     return config
 
 
+#: Lists that must be positive and rising.
+_LADDERS = (
+    "snr_thresholds",
+    "half_windows_s",
+    "rms_thresholds",
+    "fringe_passes",
+    "fringe_thresholds",
+)
+
+
 def _check_between(config: Config, where: str) -> None:
     tiles = config.tiles
     if tiles.q_max <= tiles.q_min:
@@ -298,11 +378,18 @@ def _check_between(config: Config, where: str) -> None:
             f"{where}: tiles.f_high_hz={tiles.f_high_hz} must be above "
             f"tiles.f_low_hz={tiles.f_low_hz}"
         )
-    for name in ("snr_thresholds", "half_windows_s"):
+    for name in _LADDERS:
         values = getattr(config.witnesses, name)
         if any(v <= 0 for v in values) or sorted(set(values)) != values:
             raise ConfigError(
                 f"{where}: witnesses.{name}={values} must be positive and rising"
+            )
+    pairs = [(p.fast, p.slow) for p in config.witnesses.products]
+    for pair in pairs:
+        if pair[0] == pair[1] or pairs.count(pair) > 1:
+            raise ConfigError(
+                f"{where}: witnesses.products fast={pair[0]!r} slow={pair[1]!r}: name "
+                "two different channels, and each pair once"
             )
     layout = config.data.layout
     if layout and (layout.step_attribute is None) == (layout.rate_attribute is None):

@@ -173,6 +173,38 @@ CHANNEL_LIST: tuple[str, ...] = (
     "description",
 )
 
+#: What the part of a derived channel's name behind ``@`` begins with -> its kind.
+_KINDS = {"rms": "motion", "fringe": "fringe", "product": "product"}
+
+
+def kind_of(channel: str) -> str:
+    """Give the kind of a channel's rows: transients, motion, fringe or product.
+
+    Examples
+    --------
+    >>> kind_of("OV-A"), kind_of("OV-A@rms-1-2Hz"), kind_of("OV-A@fringe-n2")
+    ('transients', 'motion', 'fringe')
+    """
+    return _KINDS.get(channel.partition("@")[2].partition("-")[0], "transients")
+
+
+def recordings_of(channel: str) -> tuple[str, ...]:
+    """Give the recorded channels that a channel is made from.
+
+    A derived channel is at most as safe as each of them.
+
+    Examples
+    --------
+    >>> recordings_of("OV-A"), recordings_of("OV-A@rms-1-2Hz")
+    (('OV-A',), ('OV-A',))
+    >>> recordings_of("OV-A@product-OV-B")
+    ('OV-A', 'OV-B')
+    """
+    first, _, rest = channel.partition("@")
+    kind, _, second = rest.partition("-")
+    return (first, second) if kind == "product" else (first,)
+
+
 _DTYPES = {"float": "float64", "int": "Int64", "text": "string", "flag": "boolean"}
 
 

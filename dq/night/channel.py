@@ -21,6 +21,8 @@ from dq.night.blocks import (
     default_low_edge,
     plan_blocks,
 )
+from dq.night.motion import Derived, MotionRun
+from dq.night.motion_plan import MotionPlan
 from dq.night.whitened import WhitenedBlocks
 from dq.segments import Segments
 from dq.tables import TRANSIENTS, conform
@@ -62,6 +64,8 @@ class ChannelResult:
         ``saturation``, ``flat_line``, ``dropout``, ``not_finite``.
     notes : list of str
         What a reader should know, one line each.
+    derived : dict of str to Derived
+        Slow and derived witnesses by name.
     """
 
     channel: str
@@ -74,6 +78,7 @@ class ChannelResult:
     unjudged: Segments
     faults: dict[str, Segments]
     notes: list[str] = field(default_factory=list)
+    derived: dict[str, Derived] = field(default_factory=dict)
 
 
 @dataclass
@@ -90,12 +95,14 @@ class _Item:
 class _ChannelRun:
     """The batch loop over one channel; see :func:`analyse_channel`."""
 
-    def __init__(self, data, plan: BlockPlan, config: Config, ready, wanted):
+    def __init__(self, data, plan: BlockPlan, config: Config, ready, wanted, motion):
         self.plan = plan
         self.wanted = wanted
         self.q_range = (config.tiles.q_min, config.tiles.q_max)
         self.threshold = 1.0 + 0.5 * config.transients.snr_threshold**2
-        self.blocks = WhitenedBlocks(data, plan, config, ready)
+        self.motion = MotionRun(motion, data.rate, plan.step_ns) if motion else None
+        reach_ns = self.motion.reach_ns if self.motion else 0
+        self.blocks = WhitenedBlocks(data, plan, config, ready, reach_ns=reach_ns)
         self.faults = self.blocks.faults
         self.finite: list[tuple[int, int]] = []
         self.analysed: list[tuple[int, int]] = []
@@ -113,6 +120,8 @@ class _ChannelRun:
         parts = [self.pending]
         for low in range(start_ns, start_ns + plan.batch_ns, plan.step_ns):
             self.blocks.move(low, low + plan.step_ns)
+            if self.motion:
+                self.motion.take(self.blocks.pieces, low // plan.step_ns)
             self.finite += [(p.start_ns, p.end_ns) for p in self.blocks.pieces]
             waiting = self._items(low, low + plan.step_ns)
             while waiting:
@@ -225,6 +234,7 @@ def analyse_channel(
     config: Config,
     f_low_hz: float | None = None,
     f_high_hz: float | None = None,
+    motion: MotionPlan | None = None,
     progress=None,
 ) -> ChannelResult:
     """Find the transients of one channel in ``[start_ns, end_ns)``.
@@ -241,6 +251,8 @@ def analyse_channel(
     config : Config
     f_low_hz, f_high_hz : float, optional
         The channel's own band; the configuration's otherwise.
+    motion : MotionPlan, optional
+        What is derived from the channel besides; nothing by default.
     progress : callable, optional
         Called with the fraction done, after each batch.
 
@@ -269,7 +281,7 @@ def analyse_channel(
     tiles = config.tiles
     f_low = f_low_hz or tiles.f_low_hz or default_low_edge(float(data.rate))
     plan = plan_blocks(data.rate, config, f_low, f_high_hz or tiles.f_high_hz)
-    run = _ChannelRun(data, plan, config, ready & recorded, wanted)
+    run = _ChannelRun(data, plan, config, ready & recorded, wanted, motion)
     batches = _batches(wanted & recorded, plan.batch_ns)
     for number, index in enumerate(batches):
         follows = number + 1 < len(batches) and batches[number + 1] == index + 1
@@ -281,6 +293,8 @@ def analyse_channel(
             f"channel {data.name!r} is constant at {run.faults.lowest:g} "
             "throughout; it is dead or not connected"
         )
+    if run.motion:
+        run.motion.read_around(data, ready & recorded, wanted & recorded)
     return _result(data, run, plan, wanted, recorded, f_low)
 
 
@@ -306,6 +320,10 @@ def _result(data, run: _ChannelRun, plan, wanted, recorded, f_low) -> ChannelRes
         )
     if run.cut:
         notes.append("transients longer than a batch of blocks were cut at its end")
+    derived = {}
+    if run.motion:
+        notes += run.motion.plan.notes
+        derived = run.motion.derived(data.name, wanted)
     return ChannelResult(
         channel=data.name,
         sample_rate=float(data.rate),
@@ -317,4 +335,5 @@ def _result(data, run: _ChannelRun, plan, wanted, recorded, f_low) -> ChannelRes
         unjudged=finite - analysed,
         faults=faults,
         notes=notes,
+        derived=derived,
     )

@@ -6,6 +6,8 @@ from dataclasses import dataclass, field
 
 from dq.errors import DqError, NoDataError
 from dq.night.inputs import Inputs, nearest
+from dq.night.plan import channel_motion
+from dq.night.products import product_data, product_rows
 from dq.segments import Segments, seconds_text
 from dq.store import Channel
 
@@ -87,6 +89,7 @@ def check_inputs(inputs: Inputs) -> Findings:
             found.odd.append(f"{where}: {text}; the channel is not on the list")
     for row in listed:
         _check_channel(found, inputs, row)
+    _check_motion(found, inputs, present)
     _check_unused(found, inputs)
     return found
 
@@ -148,6 +151,38 @@ def _check_channel(found: Findings, inputs: Inputs, row: Channel) -> None:
             f"{row.name}: f_high_hz = {row.f_high_hz:g} is above half the rate, "
             f"{rate / 2:g} Hz"
         )
+
+
+def _check_motion(found: Findings, inputs: Inputs, present: list[Channel]) -> None:
+    """Say which channels get slow and derived witnesses."""
+    levels, fringes, count = [], [], 0
+    for row in present:
+        try:
+            motion = channel_motion(inputs, row)
+        except DqError:
+            continue
+        if motion is None:
+            continue
+        if motion.bands:
+            levels.append(row.name)
+        if motion.source:
+            fringes.append(row.name)
+        count += len(motion.names(row.name))
+        found.odd += [f"{row.name}: {note}" for note in motion.notes]
+    products = product_rows(inputs)
+    for row in products:
+        try:
+            product_data(inputs, row.name)
+        except DqError as error:
+            found.unusable.append(f"{row.name}: {error}")
+    names = [f"{len(levels)}: {_some(levels)}" if levels else "none"]
+    names += [f"{len(fringes)}: {_some(fringes)}" if fringes else "none"]
+    found.facts += [
+        ("level in octave bands", names[0]),
+        ("fringe frequency", names[1]),
+        ("products", _some([row.name for row in products]) or "none"),
+        ("derived witnesses", str(count + len(products))),
+    ]
 
 
 def _check_unused(found: Findings, inputs: Inputs) -> None:

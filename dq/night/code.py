@@ -10,7 +10,7 @@ import dq
 
 #: What a channel's result depends on; everything else works from the results. All of
 #: the night counts: a list of its files would be forgotten when one is added.
-ENGINE = ("segments", "store", "conditioning", "tiles", "transients", "night")
+ENGINE = ("segments", "store", "conditioning", "tiles", "transients", "motion", "night")
 
 
 @cache

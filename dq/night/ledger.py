@@ -6,7 +6,7 @@ its channels are done: there is one way from channels to vetoes, not two.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -129,6 +129,7 @@ def make_ledger(
     -------
     Ledger
     """
+    rows, results = _with_derived(rows, results)
     order = sorted(rows, key=lambda row: (row.role != "strain", row.name))
     lines = [_line(row, results.get(row.name), left_out) for row in order]
     spans = [
@@ -145,6 +146,34 @@ def make_ledger(
         channels=conform(pd.DataFrame(lines), NIGHT_CHANNELS),
         coverage=conform(pd.DataFrame(spans, columns=columns), COVERAGE),
     )
+
+
+def _with_derived(
+    rows: list[Channel], results: dict[str, ChannelResult]
+) -> tuple[list[Channel], dict[str, ChannelResult]]:
+    """Add the derived channels as channels; their parents' faults are not theirs."""
+    rows = list(rows)
+    results = {
+        name: replace(result, faults={}) if "@" in name else result
+        for name, result in results.items()
+    }
+    for row in list(rows):
+        parent = results.get(row.name)
+        for name, one in (parent.derived if parent else {}).items():
+            rows.append(Channel(name=name, role="auxiliary", safe=row.safe))
+            finite = parent.analysed | parent.unjudged
+            results[name] = ChannelResult(
+                channel=name,
+                sample_rate=one.sample_rate,
+                f_low_hz=one.f_low_hz,
+                f_high_hz=one.f_high_hz,
+                transients=one.transients,
+                analysed=one.analysed & finite,
+                missing=parent.missing,
+                unjudged=finite - one.analysed,
+                faults={},
+            )
+    return rows, results
 
 
 def _kinds(result: ChannelResult) -> dict[str, Segments]:

@@ -11,10 +11,13 @@ from dq.config import digest
 from dq.errors import DqError, NoDataError
 from dq.night.code import ENGINE, code_digest
 from dq.night.inputs import Inputs, check_strain_time
+from dq.night.motion_plan import MotionPlan, plan_motion, strain_edge
 from dq.night.pool import Task
+from dq.night.products import product_data, product_rows
 from dq.night.state import state_path
 from dq.segments import Segments
 from dq.store import Channel
+from dq.tables import recordings_of
 
 _NS = 1_000_000_000
 
@@ -90,7 +93,7 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
     check_strain_time(inputs, start_ns, end_ns)
     plan = NightPlan(inputs, start_ns, end_ns)
     strain = inputs.strain
-    for row in [strain, *inputs.auxiliary]:
+    for row in [strain, *inputs.auxiliary, *product_rows(inputs)]:
         try:
             plan.tasks.append(_task(plan, row, state))
         except DqError as error:
@@ -110,7 +113,9 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
         plan.left_out,
     )
     contents = {
-        t.channel: inputs.store.content_id(t.channel, plan.reach) for t in plan.tasks
+        name: inputs.store.content_id(name, plan.reach)
+        for t in plan.tasks
+        for name in recordings_of(t.channel)
     }
     plan.inputs_sha256 = sha256_of(inputs.texts, contents)
     return plan
@@ -118,9 +123,13 @@ def plan_night(inputs: Inputs, start_ns: int, end_ns: int, state: Path) -> Night
 
 def _task(plan: NightPlan, row: Channel, state: Path) -> Task:
     inputs = plan.inputs
-    if row.name not in inputs.store.channels:
+    if "@" in row.name:
+        data, motion = product_data(inputs, row.name), None
+    elif row.name in inputs.store.channels:
+        data = inputs.store.channel(row.name)
+        motion = channel_motion(inputs, row)
+    else:
         raise NoDataError(inputs.why_absent(row.name))
-    data = inputs.store.channel(row.name)
     recorded = data.recorded & plan.wanted
     if not recorded:
         raise NoDataError("no data: nothing is recorded in the ready time of the range")
@@ -132,13 +141,23 @@ def _task(plan: NightPlan, row: Channel, state: Path) -> Task:
         end_ns=plan.end_ns,
         f_low_hz=row.f_low_hz,
         f_high_hz=row.f_high_hz,
-        key=_key(plan, row),
+        key=_key(plan, row, motion),
         state=state_path(state, row.name),
         weight=float(data.rate) * recorded.total_s,
+        motion=motion,
     )
 
 
-def _key(plan: NightPlan, row: Channel) -> str:
+def channel_motion(inputs: Inputs, row: Channel) -> MotionPlan | None:
+    """Say what is derived from a recorded channel of the list."""
+    data = inputs.store.channel(row.name)
+    strain = inputs.strain
+    rate = float(inputs.store.channel(strain.name).rate)
+    edge = strain_edge(strain, rate, inputs.config)
+    return plan_motion(row, float(data.rate), data.unit, inputs.config, edge)
+
+
+def _key(plan: NightPlan, row: Channel, motion: MotionPlan | None) -> str:
     """Give the digest of everything that a channel's result depends on."""
     inputs, config = plan.inputs, plan.inputs.config
     ready = inputs.wanted & plan.reach
@@ -149,7 +168,8 @@ def _key(plan: NightPlan, row: Channel) -> str:
         [row.f_low_hz, row.f_high_hz],
         [plan.start_ns, plan.end_ns],
         [ready.starts.tolist(), ready.ends.tolist()],
-        inputs.store.fingerprint(row.name, plan.reach),
+        [inputs.store.fingerprint(n, plan.reach) for n in recordings_of(row.name)],
+        motion.key() if motion else None,
     )
 
 

@@ -33,6 +33,8 @@ from dq.night.folder import LOST
 from dq.segments import Segments
 
 if TYPE_CHECKING:
+    from dq.night.motion_plan import MotionPlan
+    from dq.night.products import ProductData
     from dq.store import ChannelData
 
 log = logging.getLogger(__name__)
@@ -46,7 +48,7 @@ _ONE_THREAD = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
 class Task:
     """One channel to analyse, with everything a worker needs."""
 
-    data: ChannelData
+    data: ChannelData | ProductData
     config: Config
     ready: Segments
     start_ns: int
@@ -56,6 +58,7 @@ class Task:
     key: str
     state: Path
     weight: float
+    motion: MotionPlan | None = None
 
     @property
     def channel(self) -> str:
@@ -91,6 +94,7 @@ def run_task(task: Task) -> Outcome:
             config=task.config,
             f_low_hz=task.f_low_hz,
             f_high_hz=task.f_high_hz,
+            motion=task.motion,
         )
     except DqError as error:
         return Outcome(task.channel, _line(str(error)))

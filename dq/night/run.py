@@ -19,6 +19,7 @@ from dq.night.ledger import make_ledger
 from dq.night.outputs import finished_as, new_manifest, write_night
 from dq.night.plan import NightPlan, plan_night
 from dq.night.pool import make_pool, run_tasks
+from dq.night.products import product_rows
 from dq.night.state import load_state
 
 log = logging.getLogger(__name__)
@@ -110,7 +111,8 @@ def run_night(
         left_out |= _problems(inputs, left_out)
         for name, reason in sorted(left_out.items()):
             log.warning("left out: %s: %s", name, reason)
-        ledger = make_ledger([inputs.strain, *inputs.auxiliary], results, left_out)
+        rows = [inputs.strain, *inputs.auxiliary, *product_rows(inputs)]
+        ledger = make_ledger(rows, results, left_out)
         ledger = with_families(plan, folder, ledger)
         clock.lap("features")
         manifest = new_manifest(plan, ledger, left_out)

@@ -18,14 +18,16 @@ import numpy as np
 import pandas as pd
 
 from dq.night.channel import ChannelResult
+from dq.night.motion import Derived
 from dq.segments import Segments
 from dq.tables import TRANSIENTS, conform
 from dq.writers import write_atomically
 
 #: Grows when the meaning of a state file or of its content changes.
-STATE_SCHEMA = 1
+STATE_SCHEMA = 2
 
 _SEGMENTS = ("analysed", "missing", "unjudged")
+_DERIVED = ("sample_rate", "f_low_hz", "f_high_hz")
 
 
 def state_path(directory: Path, channel: str) -> Path:
@@ -60,11 +62,13 @@ def save_state(path: Path, key: str, result: ChannelResult) -> None:
             _put_segments(file, name, getattr(result, name))
         for kind, segments in result.faults.items():
             _put_segments(file, f"faults/{kind}", segments)
-        for column in result.transients.columns:
-            values = result.transients[column].to_numpy()
-            if column == "tile_count":
-                values = values.astype(np.int64)
-            file.create_dataset(f"transients/{column}", data=values)
+        _put_table(file, "transients", result.transients)
+        for name, derived in result.derived.items():
+            group = file.create_group(f"derived/{name}")
+            for key in _DERIVED:
+                group.attrs[key] = getattr(derived, key)
+            _put_segments(group, "analysed", derived.analysed)
+            _put_table(group, "transients", derived.transients)
     write_atomically(path, buffer.getvalue())
 
 
@@ -76,22 +80,45 @@ def load_state(path: Path, key: str) -> ChannelResult | None:
         with h5py.File(path, "r") as file:
             if file.attrs["schema"] != STATE_SCHEMA or file.attrs["key"] != key:
                 return None
-            columns = {c.name: file[f"transients/{c.name}"][:] for c in TRANSIENTS}
             return ChannelResult(
                 channel=str(file.attrs["channel"]),
                 sample_rate=float(file.attrs["sample_rate"]),
                 f_low_hz=float(file.attrs["f_low_hz"]),
                 f_high_hz=float(file.attrs["f_high_hz"]),
-                transients=conform(pd.DataFrame(columns), TRANSIENTS),
+                transients=_get_table(file["transients"]),
                 **{name: _get_segments(file[name]) for name in _SEGMENTS},
                 faults={k: _get_segments(v) for k, v in file.get("faults", {}).items()},
                 notes=json.loads(file["notes"][()]),
+                derived={
+                    k: _get_derived(v) for k, v in file.get("derived", {}).items()
+                },
             )
     except (OSError, KeyError, ValueError, RuntimeError):
         return None
 
 
-def _put_segments(file: h5py.File, name: str, segments: Segments) -> None:
+def _put_table(file: h5py.Group, name: str, table: pd.DataFrame) -> None:
+    for column in table.columns:
+        values = table[column].to_numpy()
+        if column == "tile_count":
+            values = values.astype(np.int64)
+        file.create_dataset(f"{name}/{column}", data=values)
+
+
+def _get_table(group: h5py.Group) -> pd.DataFrame:
+    columns = {c.name: group[c.name][:] for c in TRANSIENTS}
+    return conform(pd.DataFrame(columns), TRANSIENTS)
+
+
+def _get_derived(group: h5py.Group) -> Derived:
+    return Derived(
+        **{key: float(group.attrs[key]) for key in _DERIVED},
+        transients=_get_table(group["transients"]),
+        analysed=_get_segments(group["analysed"]),
+    )
+
+
+def _put_segments(file: h5py.Group, name: str, segments: Segments) -> None:
     file.create_dataset(name, data=np.stack([segments.starts, segments.ends]))
 
 

@@ -54,7 +54,7 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
         },
         "volume_time_ratio": {"value": _UNKNOWN, "low": _UNKNOWN, "high": _UNKNOWN},
         "channels": {
-            "ok": len(ledger.transients),
+            "ok": sum("@" not in name for name in ledger.transients),
             "left_out": manifest["left_out"],
         },
         "settings_sha256": manifest["settings_sha256"],

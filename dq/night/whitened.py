@@ -29,9 +29,13 @@ class WhitenedBlocks:
     config : Config
     ready : Segments
         Samples outside are not read.
+    reach_ns : int, optional
+        How far around its blocks somebody else needs the samples.
     """
 
-    def __init__(self, data, plan: BlockPlan, config: Config, ready: Segments):
+    def __init__(
+        self, data, plan: BlockPlan, config: Config, ready: Segments, *, reach_ns=0
+    ):
         settings = config.conditioning
         self.plan = plan
         self.window = SampleWindow(data, ready)
@@ -45,7 +49,7 @@ class WhitenedBlocks:
         self.faults = FaultLog()
         segment_ns = round(plan.segment / plan.rate * _NS)
         reach = self.frames.span_ns + self.frames.frame_ns + segment_ns
-        self.margin_ns = plan.pad_ns + segment_ns
+        self.margin_ns = max(plan.pad_ns + segment_ns, reach_ns)
         self.context_ns = max(reach, self.margin_ns)
 
     @property

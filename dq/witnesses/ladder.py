@@ -106,7 +106,12 @@ def sorted_transients(transients) -> tuple[np.ndarray, np.ndarray]:
 
 
 def climb(
-    strain: JointStrain, when: np.ndarray, snr: np.ndarray, settings
+    strain: JointStrain,
+    when: np.ndarray,
+    snr: np.ndarray,
+    settings,
+    *,
+    ladder: list[float] | None = None,
 ) -> tuple[Combination | None, int]:
     """Go through both ladders.
 
@@ -116,6 +121,8 @@ def climb(
     when, snr : ndarray
         The channel's transients, sorted by time.
     settings : dq.config.Witnesses
+    ladder : list of float, optional
+        Thresholds of the channel; the settings' on the SNR by default.
 
     Returns
     -------
@@ -126,7 +133,8 @@ def climb(
         below it is no test of its own, nor are windows that cover nothing or all.
     """
     found, before = [], -1
-    for threshold in settings.snr_thresholds if len(strain.positions) else ():
+    ladder = settings.snr_thresholds if ladder is None else ladder
+    for threshold in ladder if len(strain.positions) else ():
         loud = when[snr >= threshold]
         if len(loud) in (0, before):
             continue

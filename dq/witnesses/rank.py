@@ -92,7 +92,8 @@ def find_witnesses(
                 shared[joint[name]] = JointStrain(times, joint[name])
             here = shared[joint[name]]
             when, snr = sorted_transients(auxiliary[name])
-            best[name], tested = climb(here, when, snr, settings)
+            ladder = settings.ladder(name)
+            best[name], tested = climb(here, when, snr, settings, ladder=ladder)
         trials += tested
     for name, found in best.items():
         if found and _p_value(found, trials) <= settings.false_alarm_probability:
