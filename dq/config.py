@@ -267,7 +267,7 @@ class Vetoes(_Section):
         gt=0.0,
         le=1.0,
         description="Hz; background rate at which the volume-time ratio is taken, "
-        "raised to 3 transients in the analysed time where that is more (own choice: "
+        "raised to 10 transients in the analysed time where that is more (own choice: "
         "below it no loudness can be read off a night)",
     )
 

@@ -84,7 +84,7 @@ def cost_of(
     rows = []
     segments = veto_segments(vetoes, analysed)
     firsts = vetoes.drop_duplicates("veto").set_index("veto")
-    alone = _covered_once(list(segments.values()))
+    alone = covered_once(list(segments.values()))
     shared = np.sum([s.contains(times) for s in segments.values()], axis=0)
     union, gone = Segments.none(), np.zeros(len(times), dtype=bool)
     for name, mine in segments.items():
@@ -109,7 +109,7 @@ def cost_of(
     return conform(table, VETO_COST)
 
 
-def _covered_once(vetoes: list[Segments]) -> Segments:
+def covered_once(vetoes: list[Segments]) -> Segments:
     """Give the time that exactly one of the vetoes covers."""
     if not vetoes:
         return Segments.none()

@@ -22,15 +22,15 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from dq.cost.cost import ALL, union_of
+from dq.cost.cost import ALL, covered_once, union_of
 from dq.segments import NS, Segments, to_ns_array
 
 if TYPE_CHECKING:
     import pandas as pd
 
-#: Fewest transients at the false alarm rate: with fewer the loudness is that of one or
-#: two outliers (own choice).
-LEAST_COUNT = 5
+#: Fewest transients at the false alarm rate: with fewer the loudness is that of a
+#: few outliers (own choice).
+LEAST_COUNT = 10
 
 #: Blocks of time that the bootstrap draws, s (own choice: longer than most bursts).
 BLOCK_S = 32.0
@@ -107,12 +107,15 @@ class Background:
     def ratio(self, segments: Segments) -> float:
         """Give the volume-time ratio of some vetoed time, without interval."""
         live = self.analysed.total_s - segments.total_s
-        if not self.judged or live <= 0:
+        return self.ratio_of(~segments.contains(self.times), live)
+
+    def ratio_of(self, kept: np.ndarray, live_s: float) -> float:
+        """Give the ratio from the transients and the time that are left."""
+        if not self.judged or live_s <= 0:
             return float("nan")
-        whole = np.ones(len(self.times), dtype=bool)
-        before = self.loudness(whole, self.analysed.total_s)
-        after = self.loudness(~segments.contains(self.times), live)
-        return live / self.analysed.total_s * (before / after) ** 3
+        total_s = self.analysed.total_s
+        before = self.loudness(np.ones(len(self.times), dtype=bool), total_s)
+        return live_s / total_s * (before / self.loudness(kept, live_s)) ** 3
 
 
 def _loudness(snr: np.ndarray, weights: np.ndarray, counts) -> np.ndarray:
@@ -241,11 +244,18 @@ def volume_time_columns(
     """
     import pandas as pd
 
-    whole = background.ratio(union_of(segments.values()))
+    names = list(segments)
+    union, once = union_of(segments.values()), covered_once(list(segments.values()))
+    left_s = background.analysed.total_s - union.total_s
+    holds = [segments[n].contains(background.times) for n in names]
+    depth = np.sum(holds, axis=0) if holds else np.zeros(len(background.times))
+    whole = background.ratio_of(depth == 0, left_s)
     rows = {}
-    for name, mine in segments.items():
-        others = union_of(s for n, s in segments.items() if n != name)
-        rows[name] = (background.ratio(mine), whole / background.ratio(others))
+    for name, mine in zip(names, holds, strict=True):
+        # what no other veto has comes back when this one is left out
+        others_s = left_s + (segments[name] & once).total_s
+        others = background.ratio_of(depth == mine, others_s)
+        rows[name] = (background.ratio(segments[name]), whole / others)
     rows[ALL] = (whole, whole)
     columns = ["volume_time_ratio", "volume_time_unique"]
     return pd.DataFrame.from_dict(rows, orient="index", columns=columns, dtype=float)

@@ -16,11 +16,12 @@ from dq.errors import InputError
 from dq.night.channel import ChannelResult
 from dq.segments import Segments
 from dq.store import Channel
-from dq.tables import COVERAGE, NIGHT_CHANNELS, conform, csv_table
+from dq.tables import COVERAGE, NIGHT_CHANNELS, PLANTED, conform, csv_table
 
 CHANNELS_FILE = "channels.csv"
 COVERAGE_FILE = "coverage.csv"
 TRANSIENTS_FILE = "transients.h5"
+PLANTED_FILE = "planted.csv"
 
 _ACCOUNTED = ("analysed", "missing", "unjudged")
 
@@ -166,14 +167,40 @@ def read_ledger(directory: Path, strain: str) -> Ledger:
         (CHANNELS_FILE, NIGHT_CHANNELS),
         (COVERAGE_FILE, COVERAGE),
     ):
-        path = directory / name
-        try:
-            tables[name] = csv_table(path.read_text(encoding="utf-8"), columns)
-        except (OSError, UnicodeDecodeError) as error:
-            raise InputError(
-                f"cannot read {str(path)!r}: {error}; run the night again"
-            ) from error
-        except InputError as error:
-            raise InputError(f"{str(path)!r}: {error}; run the night again") from error
+        tables[name] = _read(directory / name, columns)
     transients = read_transients_h5(directory / TRANSIENTS_FILE)
     return Ledger(strain, transients, tables[CHANNELS_FILE], tables[COVERAGE_FILE])
+
+
+def _read(path: Path, columns) -> pd.DataFrame:
+    try:
+        return csv_table(path.read_text(encoding="utf-8"), columns)
+    except (OSError, UnicodeDecodeError) as error:
+        raise InputError(
+            f"cannot read {str(path)!r}: {error}; run the night again"
+        ) from error
+    except InputError as error:
+        raise InputError(f"{str(path)!r}: {error}; run the night again") from error
+
+
+def write_planted(directory: Path, planted: pd.DataFrame | None) -> None:
+    """Write the simulated signals of a night; without any there is no file."""
+    from dq.writers import write_table
+
+    path = directory / PLANTED_FILE
+    if planted is None:
+        path.unlink(missing_ok=True)
+    else:
+        write_table(path, planted, PLANTED)
+
+
+def read_planted(directory: Path) -> pd.DataFrame | None:
+    """Read the simulated signals of a night's folder; None where none were planted.
+
+    Raises
+    ------
+    InputError
+        The table is damaged.
+    """
+    path = directory / PLANTED_FILE
+    return _read(path, PLANTED) if path.exists() else None
