@@ -8,13 +8,14 @@ files.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
 
 from dq.errors import InputError
-from dq.segments import seconds_text, to_ns
+from dq.segments import seconds_text, to_ns_list
 
 
 @dataclass(frozen=True)
@@ -311,8 +312,21 @@ def csv_text(table: pd.DataFrame, columns: tuple[Column, ...]) -> str:
     return stream.getvalue()
 
 
-def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
+def csv_table(
+    text: str,
+    columns: tuple[Column, ...],
+    *,
+    keep: Callable[[pd.DataFrame], np.ndarray] | None = None,
+) -> pd.DataFrame:
     r"""Read back what :func:`csv_text` wrote; an empty cell is a missing value.
+
+    Parameters
+    ----------
+    text : str
+    columns : tuple of Column
+    keep : callable, optional
+        Says from the cells, as texts, which rows are wanted; the others are not
+        turned into values.
 
     Raises
     ------
@@ -329,6 +343,8 @@ def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
 
     try:
         cells = pd.read_csv(io.StringIO(text), dtype=str, keep_default_na=False)
+        if keep is not None:
+            cells = cells[keep(cells)].reset_index(drop=True)
         table = {c.name: _parse_column(cells[c.name], c) for c in columns}
     except (ValueError, KeyError, pd.errors.ParserError) as error:
         raise InputError(f"table does not read back: {error}") from error
@@ -337,7 +353,7 @@ def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
 
 def _parse_column(cells: pd.Series, column: Column) -> pd.Series:
     if column.kind == "time_ns":
-        return cells.map(to_ns).astype("int64")
+        return pd.Series(to_ns_list(cells), index=cells.index, dtype="int64")
     known = cells.mask(cells == "")
     if column.kind == "flag":
         return known.map({"yes": True, "no": False})
