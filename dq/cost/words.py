@@ -53,11 +53,15 @@ def volume_sentence(volume: dict) -> str:
 
 
 def losing_vetoes(cost: pd.DataFrame) -> list[str]:
-    """Name the vetoes that the search is better off without, worst first.
+    """Say which vetoes the search is better off without, worst first.
 
     Faults are no choice and are not named.
     """
     rows = cost[cost["source"].fillna("").isin(["witness", "family"])]
     worse = rows[rows["volume_time_unique"] < 1.0]
-    order = worse["volume_time_unique"].sort_values(kind="stable").index
-    return [str(name) for name in worse.loc[order, "veto"]]
+    worse = worse.sort_values("volume_time_unique", kind="stable")
+    return [
+        f"{row.veto} loses more than it gains: without it, and with all others, volume "
+        f"x time would be {1.0 / row.volume_time_unique:.3f} times as large."
+        for row in worse.itertuples()
+    ]
