@@ -46,8 +46,8 @@ def volume_sentence(volume: dict) -> str:
     even, dead = volume.get("break_even"), volume.get("dead_time_fraction")
     if even is not None and dead is not None:
         text += (
-            f" They take {100 * dead:.2f} % of the time; at {100 * even:.2f} % they "
-            "would bring nothing."
+            f" They take {100 * dead:.2f} % of the time; with this fall of loudness "
+            f"they would break even at {100 * even:.2f} %."
         )
     return text
 

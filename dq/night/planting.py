@@ -31,8 +31,9 @@ RUN_SIGNALS = 8
 #: A transient within this of a burst, or of a chirp's end, is the signal, s.
 NEAR_S = 0.25
 
-#: Noise that a signal's strength is set by, s, around it.
-_NOISE_S = 16.0
+#: Noise on each side that a signal's strength is set by, s: a hundred periodograms of
+#: a second leave the strength within a percent.
+_NOISE_S = 32.0
 
 #: Sorts a run's transients: (transients, data with the signals) -> families.
 Sorter = Callable[[pd.DataFrame, "PlantedData"], "list[str]"]
@@ -99,28 +100,31 @@ def plan_runs(analysed: Segments, plants: int) -> list[_Run]:
         Signals wanted; short stretches may leave room for fewer.
     """
     spacing = round(SPACING_S * NS)
-    slots = [
-        (int(low + k * spacing), int(low + (k + 1) * spacing))
-        for low, high in analysed
-        for k in range((high - low) // spacing)
-    ]
-    if not slots or plants <= 0:
-        return []
-    count = min(-(-plants // RUN_SIGNALS), -(-len(slots) // RUN_SIGNALS))
-    runs, left = [], min(plants, len(slots))
-    for part in np.array_split(np.arange(len(slots)), count):
-        wanted = min(RUN_SIGNALS, left, len(part))
-        chosen: list[tuple[int, int]] = []
-        for number in part:
-            slot = slots[number]
-            if len(chosen) == wanted or (chosen and chosen[-1][1] != slot[0]):
-                break
-            chosen.append(slot)
-        left -= len(chosen)
-        times = [(a + b) // 2 for a, b in chosen]
-        if times:
-            runs.append(_Run(chosen[0][0], chosen[-1][1], times))
+    chunks = []
+    for low, high in analysed:
+        slots = [int(low) + k * spacing for k in range((high - low) // spacing)]
+        chunks += [
+            slots[k : k + RUN_SIGNALS] for k in range(0, len(slots), RUN_SIGNALS)
+        ]
+    left = min(plants, sum(map(len, chunks)))
+    count = -(-left // RUN_SIGNALS)
+    while left and sum(map(len, _spread(chunks, count))) < left:
+        count += 1
+    runs = []
+    for slots in _spread(chunks, count) if left > 0 else ():
+        slots = slots[:left]
+        left -= len(slots)
+        if slots:
+            times = [start + spacing // 2 for start in slots]
+            runs.append(_Run(slots[0], slots[-1] + spacing, times))
     return runs
+
+
+def _spread(chunks: list, count: int) -> list:
+    """Take some of a list, evenly."""
+    count = min(count, len(chunks))
+    places = (np.arange(count) + 0.5) / max(count, 1) * len(chunks)
+    return [chunks[int(place)] for place in places]
 
 
 def plant_signals(

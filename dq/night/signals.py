@@ -138,7 +138,7 @@ def optimal_snr(
     ----------
     waveform : ndarray
     noise : ndarray
-        At least as long as ten seconds of samples or ten times the waveform.
+        A minute or so: the density is a median-mean over segments of a second.
     sample_rate, low_hz, high_hz : float
         Hz.
 
@@ -147,7 +147,7 @@ def optimal_snr(
     rho^2 = 4 sum |h(f)|^2 / S(f) df, on the second differences of both: strain noise
     is too steep for a window's side lobes otherwise.
     """
-    segment = 2 * max(round(2.0 * sample_rate), 8)
+    segment = 2 * max(round(0.5 * sample_rate), 8)
     power = periodograms(
         difference(noise), sample_rate=sample_rate, segment=segment, hop=segment // 2
     )
