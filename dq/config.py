@@ -17,7 +17,6 @@ from pydantic import BaseModel, ConfigDict, Field, ValidationError, field_valida
 
 from dq.errors import ConfigError
 
-
 #: Families that may hold a real signal, or nothing known: no veto is made of them.
 NEVER_VETOED = ("chirp_like", "unknown", "unsorted")
 

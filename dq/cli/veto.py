@@ -36,7 +36,9 @@ def command(directory: str, max_dead_time: float | None, triggers: str | None) -
 
     search = None
     if triggers is not None:
-        search = Search(f"triggers of {Path(triggers).name}", read_triggers(Path(triggers)))
+        search = Search(
+            f"triggers of {Path(triggers).name}", read_triggers(Path(triggers))
+        )
     with log_to_stderr():
         verdict = veto_again(directory, max_dead_time=max_dead_time, search=search)
     print_vetoes(verdict)

@@ -14,6 +14,9 @@ from dq.tables import VETO_COST, conform
 if TYPE_CHECKING:
     import pandas as pd
 
+#: What a veto's own rows say of it.
+_NAMED = ("category", "source", "channel", "family")
+
 #: Name of the row that measures all vetoes together.
 ALL = "all"
 
@@ -88,9 +91,7 @@ def cost_of(
     shared = np.sum([s.contains(times) for s in segments.values()], axis=0)
     union, gone = Segments.none(), np.zeros(len(times), dtype=bool)
     for name, mine in segments.items():
-        row = {
-            k: firsts.at[name, k] for k in ("category", "source", "channel", "family")
-        }
+        row = {k: firsts.loc[name, k] for k in _NAMED}
         row |= {"veto": name, **measure(mine, times, snr, analysed)}
         holds = mine.contains(times)
         row["added_dead_time_s"] = (mine - union).total_s

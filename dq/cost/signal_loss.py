@@ -113,9 +113,7 @@ def _sorted(planted: pd.DataFrame) -> bool:
     return len(planted) > 0 and not planted["family"].eq("unsorted").any()
 
 
-def vetoes_itself(
-    planted: pd.DataFrame, family: str, padding_s: float
-) -> np.ndarray:
+def vetoes_itself(planted: pd.DataFrame, family: str, padding_s: float) -> np.ndarray:
     """Say which planted signals a veto of a family takes away because they are there.
 
     Parameters

@@ -1,4 +1,4 @@
-"""What vetoes are worth to a search: sensitive volume x time at a fixed false alarm rate.
+"""What vetoes are worth to a search: volume x time at a fixed false alarm rate.
 
 A search calls a candidate significant where its background gives few events as loud.
 Vetoes lower the background, so that quieter signals count: at fixed false alarm rate R
@@ -81,9 +81,7 @@ class Background:
         False alarm rate; raised to ``LEAST_COUNT`` in the analysed time.
     """
 
-    def __init__(
-        self, transients: pd.DataFrame, *, analysed: Segments, rate_hz: float
-    ):
+    def __init__(self, transients: pd.DataFrame, *, analysed: Segments, rate_hz: float):
         times = to_ns_array(transients["gps_time"].to_numpy(float))
         snr = transients["snr"].to_numpy(float)
         kept = analysed.contains(times) & (snr > 0)
@@ -167,9 +165,7 @@ def volume_time(
     count = len(background.times)
     value = background.ratio(segments)
     if np.isnan(value):
-        return VolumeTime(
-            nan, nan, nan, dead, background.rate_hz, nan, nan, nan, count
-        )
+        return VolumeTime(nan, nan, nan, dead, background.rate_hz, nan, nan, nan, count)
     whole = np.ones(count, dtype=bool)
     before = background.loudness(whole, total_s)
     kept = ~segments.contains(background.times)

@@ -29,6 +29,8 @@ def volume_sentence(volume: dict) -> str:
             "What the vetoes do to the search's volume cannot be told: too few "
             "transients for a background at a fixed false alarm rate."
         )
+    if volume.get("dead_time_fraction") == 0.0:
+        return "No time is vetoed, so the search neither gains nor loses."
     source = volume.get("background", "strain transients")
     rate = volume.get("rate_hz")
     at = "" if rate is None else f" at one false alarm in {1 / rate:.0f} s"
@@ -37,7 +39,7 @@ def volume_sentence(volume: dict) -> str:
     sure = low is not None and not np.isnan(low)
     if sure:
         text += f" (95 % interval {low:.3f} to {high:.3f})"
-    if sure and high < 1.0 or not sure and value < 1.0:
+    if (sure and high < 1.0) or (not sure and value < 1.0):
         text += ": the vetoes lose more than they gain."
     elif sure and low > 1.0:
         text += ": the vetoes gain more than they lose."

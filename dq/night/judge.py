@@ -184,7 +184,7 @@ def strain_table(
         ).contains(times_ns)
         for name, rows in vetoes.groupby("veto", sort=False)
     }
-    family = strain["family"] if "family" in strain else "unsorted"
+    family = strain.get("family", "unsorted")
     table = strain.assign(
         transient_id=transient_ids(strain),
         family=family,

@@ -209,7 +209,9 @@ def _row(signal: Signal, found: pd.DataFrame, before: pd.DataFrame) -> dict:
     """Give the loudest new transient at a signal's time."""
     row = {"gps_time": signal.time_ns / NS, "kind": signal.kind, "snr": signal.snr}
     near = round(NEAR_S * NS)
-    start, end = (to_ns_array(found[c].to_numpy(float)) for c in ("gps_start", "gps_end"))
+    start, end = (
+        to_ns_array(found[c].to_numpy(float)) for c in ("gps_start", "gps_end")
+    )
     here = (start < signal.time_ns + near) & (end > signal.time_ns - near)
     # what the night found there without the signal is not the signal
     known = before[["gps_time", "snr"]].round({"gps_time": 3, "snr": 1})

@@ -119,9 +119,7 @@ def draw_signal(
     first = (5.0 / (256.0 * before)) ** 0.375 * mass_s**-0.625 / np.pi
     first = float(min(first, 0.8 * last))
     before = _remaining(first, mass_s)
-    return Signal(
-        time_ns, "chirp", snr, first, chirp_mass, last, phase, before, 0.0
-    )
+    return Signal(time_ns, "chirp", snr, first, chirp_mass, last, phase, before, 0.0)
 
 
 def optimal_snr(

@@ -126,7 +126,7 @@ def _witness_lines(night: NightTables, found: OneTime, window_s: float) -> list[
         return ["  witnesses: the night has none"]
     count = len(found.active)
     lines = [
-        f"  witnesses active now: {count or 'none'} of {len(found.witnesses)} accepted; "
+        f"  witnesses active now: {count or 'none'} of {len(found.witnesses)}; "
         f"at a random time any is active with probability {found.any_chance:.3g}"
     ]
     lines += [_active_line(w) for w in found.active]

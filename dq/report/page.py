@@ -172,7 +172,8 @@ def _vetoes(night: NightTables) -> list[dict]:
                 "held": _interval(row.held_out_low, row.held_out_high),
                 "over": _number(row.efficiency_over_dead_time, "{:.3g}"),
                 "over_range": _range(
-                    row.efficiency_over_dead_time_low, row.efficiency_over_dead_time_high
+                    row.efficiency_over_dead_time_low,
+                    row.efficiency_over_dead_time_high,
                 ),
                 "lost_range": _interval(row.signal_loss_low, row.signal_loss_high),
                 "volume_beside": _number(row.volume_time_unique, "{:.3f}"),

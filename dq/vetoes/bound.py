@@ -4,9 +4,9 @@ For any set S of vetoes and any choice T whose dead time is at most B, f(T) <= f
 sum over T of the gain that each veto still adds to S, since gains only shrink (Leskovec
 et al. 2007, Proc. KDD 420, from memory). Filling B with fractions of vetoes, best rate
 first, bounds the sum. Costs must not be overstated for that: vetoes that share time
-pay for it once. So an atom of time is split evenly among the vetoes that own it, and the
-split costs of T never sum to more than the dead time of its union. The smallest bound
-over the S that the greedy path passes is kept.
+pay for it once. So an atom of time is split evenly among the vetoes that own it, and
+the split costs of T never sum to more than the dead time of its union (derived here).
+The smallest bound over the S that the greedy path passes is kept.
 """
 
 from __future__ import annotations

@@ -7,9 +7,10 @@ that fits, with what fits beside it, wins if it removes more (Khuller, Moss & Na
 Inf. Proc. Lett. 70 39): greed alone falls into the trap of a cheap small gain that
 shuts out a large one. The next best single ones are tried in the same way. For costs
 that add up, the better of the two rules removes at least 0.405 of the optimum (Tang et
-al. 2021; the larger constant of the 1999 paper rests on a proof with a gap). Here dead time is that of the union, so vetoes that share time pay
-once: that leaves the answer within the budget, but outside the theorem, and so the
-instance's own bound is worked out beside it (``dq.vetoes.bound``).
+al. 2021; the larger constant of the 1999 paper rests on a proof with a gap). Here dead
+time is that of the union, so vetoes that share time pay once: that leaves the answer
+within the budget, but outside the theorem, and so the instance's own bound is worked
+out beside it (``dq.vetoes.bound``).
 
 Ties go to the veto that stands earlier in the table. Sums are of whole numbers, so the
 answer does not depend on the order of adding.

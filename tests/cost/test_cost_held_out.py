@@ -1,4 +1,4 @@
-"""Held-out efficiency: blocks, a slow twin, and whether its interval holds the truth."""
+"""Held-out efficiency: blocks, and whether its interval holds the truth."""
 
 import importlib.util
 from pathlib import Path

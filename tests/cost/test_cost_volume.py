@@ -126,6 +126,8 @@ def test_words_leave_no_doubt():
     assert "the vetoes gain more than they lose" in said(1.4, 1.1, 1.9)
     assert "cannot be told" in said(1.1, 0.8, 1.3)
     assert "cannot be told" in said(None, None, None)
+    idle = {"value": 1.0, "low": 1.0, "high": 1.0, "dead_time_fraction": 0.0}
+    assert "neither gains nor loses" in volume_sentence(idle)
     cost = pd.DataFrame(
         {
             "veto": ["fault-x", "witness-a", "witness-b", "all"],

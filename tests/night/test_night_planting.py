@@ -34,8 +34,9 @@ def test_optimal_snr_of_a_burst_in_white_noise(rng):
 
 @pytest.mark.reference
 def test_chirp_frequency_follows_the_leading_order_law():
-    """f(tau) = 134 Hz (1.21 / Mc)^(5/8) (1 s / tau)^(3/8) (Maggiore 2008, eq. 4.20,
-    from memory), by the time between zero crossings.
+    """Follow 134 Hz (1.21 / Mc)^(5/8) (1 s / tau)^(3/8).
+
+    Maggiore 2008, eq. 4.20, from memory; by the time between zero crossings.
     """
     mass, first = 10.0, 30.0
     tau0 = 5 / 256 * (np.pi * first) ** (-8 / 3) * (mass * SOLAR_MASS_S) ** (-5 / 3)

@@ -113,7 +113,8 @@ def test_worth_by_snr_and_family_turns_the_choice():
     )
     strain = pd.DataFrame(
         {
-            "gps_time": GPS + np.array([0.2, 0.4, 0.6, 10.5, *np.arange(20.1, 21, 0.2)]),
+            "gps_time": GPS
+            + np.array([0.2, 0.4, 0.6, 10.5, *np.arange(20.1, 21, 0.2)]),
             "snr": [6.0, 6.0, 6.0, 50.0, *[40.0] * 5],
             "family": ["thunder"] * 3 + ["whistle"] + ["chirp_like"] * 5,
         }
@@ -159,6 +160,4 @@ def test_choice_of_nothing_and_without_transients():
         choice = choose_vetoes(empty, strain, analysed=whole, max_dead_time=0.1)
         assert choice.chosen == []
         assert len(choice.curve) == 1
-    assert np.isnan(
-        choose_vetoes(empty, none, analysed=whole, max_dead_time=0.1).bound
-    )
+    assert np.isnan(choose_vetoes(empty, none, analysed=whole, max_dead_time=0.1).bound)
