@@ -5,11 +5,13 @@ import pytest
 from small_site import SITE_SECONDS, SITE_START
 
 from dq.config import load_config
+from dq.night import run_night, veto_again
 from dq.night.find import find_in_channel
 from dq.night.inputs import read_inputs
 from dq.night.planting import SPACING_S, PlantedData, plan_runs, plant_signals
 from dq.night.signals import SOLAR_MASS_S, Signal, draw_signal, optimal_snr
 from dq.segments import NS, Segments
+from dq.tables import PLANTED, csv_table
 
 GPS = 1_420_000_000
 
@@ -125,3 +127,22 @@ def test_planted_bursts_are_found_and_sorted(site):
     again = plant()
     assert again.drop(columns="family").equals(table.drop(columns="family"))
     assert set(again.family.dropna()) - {""} <= {"unsorted"}
+
+
+def test_a_night_that_vetoes_families_plants_signals(
+    small_site, tmp_path, here, tree_of
+):
+    config = load_config(
+        small_site(dead=False, extra='[vetoes]\nstrain_families = ["thunder"]\n')
+    )
+    span = {"start": SITE_START, "end": SITE_START + SITE_SECONDS}
+    run_night(config, **span, out=tmp_path / "a", jobs=1)
+    table = csv_table((tmp_path / "a" / "planted.csv").read_text(), PLANTED)
+    assert len(table) >= 6
+    assert table.found.astype(bool).mean() > 0.5
+    run_night(config, **span, out=tmp_path / "b", jobs=1)
+    veto_again(tmp_path / "b")
+    one, two = (tree_of(tmp_path / name) for name in "ab")
+    for name in ("planted.csv", "veto_cost.csv", "veto_curve.csv", "summary.json"):
+        assert one[name] == two[name]
+    assert run_night(config, **span, out=tmp_path / "a", jobs=1).nothing_to_do
