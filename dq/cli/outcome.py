@@ -42,6 +42,7 @@ def _night_lines(summary: dict) -> list[str]:
         f"asked for; {summary['strain_transients']} strain transients",
         f"vetoes {len(summary['vetoes'])}: take {100 * dead:.2f} % of the analysed "
         f"time{removed} of the transients",
+        *summary["volume_time_ratio"].get("words", []),
     ]
 
 

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
+from dq.cost import losing_vetoes, volume_sentence
 from dq.counting import clopper_pearson
 from dq.night.honest import total_row
 from dq.night.judge import Verdict
@@ -55,7 +56,7 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
             "snr8": total["efficiency_snr8"],
             "snr20": total["efficiency_snr20"],
         },
-        "volume_time_ratio": verdict.volume,
+        "volume_time_ratio": verdict.volume | {"words": _words(verdict)},
         "channels": {
             "ok": len(ledger.transients),
             "left_out": manifest["left_out"],
@@ -63,6 +64,10 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
         "settings_sha256": manifest["settings_sha256"],
         "inputs_sha256": manifest["inputs_sha256"],
     }
+
+
+def _words(verdict: Verdict) -> list[str]:
+    return [volume_sentence(verdict.volume), *losing_vetoes(verdict.cost)]
 
 
 def _interval(count: int, trials: int) -> list[float] | None:

@@ -80,6 +80,26 @@ def coupled_night(rng: np.random.Generator):
     return built, strain, truth
 
 
+def bursty_night(rng: np.random.Generator):
+    """Make a night whose coupled disturbances are bursts of one to eight transients.
+
+    A fifth of the disturbances is the coupling's; its windows hold the whole burst. The
+    true efficiency is a ratio of means: bursts times their mean size over all.
+    """
+    events = rng.poisson(150)
+    at, coupled = rng.uniform(0, HOUR - 2, events), rng.uniform(size=events) < 0.2
+    size = 1 + rng.poisson(2.0, events)
+    strain_at = np.repeat(at, size) + rng.uniform(0, 1.0, int(size.sum()))
+    starts = to_ns_array(GPS + at[coupled])
+    alone = to_ns_array(GPS + rng.uniform(0, HOUR - 2, 30))
+    built = {}
+    starts = np.concatenate([starts, alone])
+    built["a"] = Segments(starts - NS // 10, starts + NS + NS // 10) & WHOLE
+    strain = pd.DataFrame({"gps_time": GPS + np.sort(strain_at), "snr": 8.0})
+    dead = Segments(alone, alone + NS).total_s / HOUR
+    return built, strain, {"a": 0.2 + 0.8 * dead}
+
+
 def chance_night(rng: np.random.Generator):
     """Make a night of forty channels that know nothing of the strain."""
     built = {
@@ -89,12 +109,14 @@ def chance_night(rng: np.random.Generator):
     return built, pd.DataFrame({"gps_time": GPS + at, "snr": 8.0})
 
 
-def coverage_of_couplings(nights: int, seed: int) -> dict[str, np.ndarray]:
+def coverage_of_couplings(
+    nights: int, seed: int, make=coupled_night
+) -> dict[str, np.ndarray]:
     """Say for each night whether intervals hold the truth, by veto."""
     held: dict[str, list[bool]] = {}
     for night in range(nights):
         rng = np.random.default_rng([seed, night])
-        built, strain, truth = coupled_night(rng)
+        built, strain, truth = make(rng)
         times = to_ns_array(strain.gps_time.to_numpy())
         table = held_out(
             chooser(built, strain, 0.05), times, analysed=WHOLE, block_s=128.0
@@ -167,6 +189,8 @@ if __name__ == "__main__":
     print(f"{nights} nights; share of nights whose 95 % interval holds the truth")
     for name, held in coverage_of_couplings(nights, seed=1).items():
         print(told(f"held out, coupling {name}", held))
+    for name, held in coverage_of_couplings(nights, 4, bursty_night).items():
+        print(told(f"held out, coupling {name} of bursts", held))
     honest, flattered = coverage_of_chance(nights, seed=2)
     print(told("held out, chance vetoes, all", honest))
     print(told("measured where chosen, chance vetoes, all", flattered))

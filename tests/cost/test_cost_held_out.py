@@ -7,6 +7,7 @@ import numpy as np
 import pytest
 
 from dq.cost import Selection, alternate_blocks, held_out
+from dq.cost.held_out import clustered_interval
 from dq.counting import clopper_pearson
 from dq.segments import NS, Segments, to_ns_array
 
@@ -88,6 +89,26 @@ def test_interval_holds_the_true_efficiency_of_planted_couplings():
     for name, held in bench.coverage_of_couplings(60, seed=7).items():
         low, high = clopper_pearson(int(held.sum()), len(held), 0.99)
         assert low <= 0.95 <= high, name
+
+
+def test_bursts_that_go_together_count_less():
+    """Ten bursts of five, half of them removed: five of ten, in effect."""
+    cluster = np.repeat(np.arange(10), 5)
+    low, high = clustered_interval(cluster % 2 == 0, cluster)
+    # 10 / 9 of 10 * 2.5^2 / 50^2, over 1 / 4 / 49
+    effect = 10 / 9 * 62.5 / 2500 * 4 * 49
+    expected = clopper_pearson(25 / effect, 50 / effect)
+    assert (low, high) == pytest.approx(expected)
+    alone = clustered_interval(cluster % 2 == 0, np.arange(50))
+    assert alone[0] > low
+    assert alone[1] < high
+    assert clustered_interval(np.zeros(50, bool), cluster) == clopper_pearson(0, 50)
+
+
+def test_interval_holds_the_truth_of_bursts():
+    held = bench.coverage_of_couplings(60, 7, bench.bursty_night)["a"]
+    low, high = clopper_pearson(int(held.sum()), len(held), 0.99)
+    assert low <= 0.95 <= high
 
 
 def test_chance_vetoes_look_good_where_chosen_and_not_held_out():

@@ -48,15 +48,17 @@ def planted(*rows):
 
 
 def test_a_family_veto_takes_signals_because_they_are_there():
-    """By hand: of four, one is sorted into the family, one lies in another's time."""
+    """By hand: of five, one is sorted into the family, one lies in another's time."""
     table = planted(
         (10.0, True, 9.5, 10.2, "thunder"),
         (50.0, True, 49.9, 50.1, "whistle"),
         (90.0, False, np.nan, np.nan, None),
         (130.0, True, 129.0, 129.5, "thunder"),
+        (170.0, True, 170.3, 170.5, "thunder"),
     )
-    assert vetoes_itself(table, "thunder", 0.1).tolist() == [True, False, False, False]
-    assert vetoes_itself(table, "thunder", 0.6).tolist() == [True, False, False, True]
+    assert vetoes_itself(table, "thunder", 0.1).tolist() == [1, 0, 0, 0, 0]
+    assert vetoes_itself(table, "thunder", 0.4).tolist() == [1, 0, 0, 0, 1]
+    assert vetoes_itself(table, "thunder", 0.6).tolist() == [1, 0, 0, 1, 1]
     segments = {
         "witness-a": Segments.from_seconds([GPS + 49], [GPS + 51]),
         "family-thunder": Segments.none(),
@@ -68,8 +70,8 @@ def test_a_family_veto_takes_signals_because_they_are_there():
         planted=table,
         padding_s=0.1,
     )
-    assert out.loc["family-thunder"].tolist() == [0.25, *clopper_pearson(1, 4)]
-    assert out.loc["all"].signal_loss == 0.5
+    assert out.loc["family-thunder"].tolist() == [0.2, *clopper_pearson(1, 5)]
+    assert out.loc["all"].signal_loss == 0.4
 
 
 @pytest.mark.parametrize("sorted_", [None, "unsorted"])
