@@ -148,7 +148,9 @@ def measure(
     fraction = _share(segments.total_ns, analysed.total_ns)
     chance = 0.0 if np.isnan(fraction) else fraction
     efficiency = _share(removed, len(times))
-    low, high = clopper_pearson(removed, len(times))
+    low, high = float("nan"), float("nan")
+    if len(times):
+        low, high = clopper_pearson(removed, len(times))
     return {
         "segments": len(segments),
         "dead_time_s": segments.total_ns / NS,
