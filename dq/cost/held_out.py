@@ -13,7 +13,8 @@ that follow each other closely are one cluster, and the variance between cluster
 it exceeds the binomial one, lowers the number of trials by their ratio (the design
 effect: Kish 1965, Survey Sampling; for this interval Korn & Graubard 1998, Survey
 Methodology 24 193; both from memory). Half of the data select fewer weak witnesses than
-all of them do, so the row ``all`` errs on the low side.
+all of them do, and at times other windows for the same one: what is measured is the way
+of choosing, and the row ``all`` errs on the low side of the vetoes in force.
 """
 
 from __future__ import annotations
