@@ -84,13 +84,15 @@ def garwood(count: int, confidence: float = 0.95) -> tuple[float, float]:
 
 
 def clopper_pearson(
-    count: int, trials: int, confidence: float = 0.95
+    count: float, trials: float, confidence: float = 0.95
 ) -> tuple[float, float]:
     """Give the exact two-sided interval of a proportion.
 
     Notes
     -----
-    Clopper & Pearson 1934, Biometrika 26 404. Without trials it is (0, 1).
+    Clopper & Pearson 1934, Biometrika 26 404. Without trials it is (0, 1). Counts need
+    not be whole: an effective number of trials gives the interval of Korn & Graubard
+    1998, Survey Methodology 24 193 (from memory).
 
     Examples
     --------

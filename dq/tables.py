@@ -8,13 +8,14 @@ files.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 import pandas as pd
 
 from dq.errors import InputError
-from dq.segments import seconds_text, to_ns
+from dq.segments import seconds_text, to_ns_list
 
 
 @dataclass(frozen=True)
@@ -89,6 +90,12 @@ WITNESSES: tuple[Column, ...] = (
         ("calibrated_significance", "1", "%.4f", "what the decision rests on"),
     ),
     Column("trials", "int", "1", "%d", "combinations tested in all channels"),
+    *_floats(
+        ("delay_s", "s", "%.6f", "strain minus witness"),
+        ("before_s", "s", "%g", "window before the witness's activity"),
+        ("after_s", "s", "%g", "window after it"),
+    ),
+    Column("kind", "text", meaning="transients, motion, fringe or product"),
 )
 
 #: Columns of ``vetoes.csv``.
@@ -130,7 +137,49 @@ VETO_COST: tuple[Column, ...] = (
         ("held_out_low", "1", "%.6f", "95 % interval, lower"),
         ("held_out_high", "1", "%.6f", "95 % interval, upper"),
         ("signal_loss", "1", "%.6f", "planted signals vetoed"),
+        ("unique_dead_time_s", "s", "%.6f", "dead time that no other veto has"),
     ),
+    Column("unique_removed", "int", "1", "%d", "removed by no other veto"),
+    *_floats(
+        ("efficiency_over_dead_time", "1", "%.6g", "efficiency / dead time fraction"),
+        ("efficiency_over_dead_time_low", "1", "%.6g", "95 % interval, lower"),
+        ("efficiency_over_dead_time_high", "1", "%.6g", "95 % interval, upper"),
+        ("signal_loss_low", "1", "%.6f", "95 % interval, lower"),
+        ("signal_loss_high", "1", "%.6f", "95 % interval, upper"),
+        ("volume_time_ratio", "1", "%.6f", "search volume x time, this veto alone"),
+        ("volume_time_unique", "1", "%.6f", "the same, beside all other vetoes"),
+    ),
+)
+
+#: Columns of ``veto_curve.csv``: vetoes in order of gain per dead time, budget aside.
+VETO_CURVE: tuple[Column, ...] = (
+    Column("step", "int", "1", "%d", "0: the faults alone"),
+    Column("veto", "text", meaning="veto added at this step"),
+    *_floats(
+        ("dead_time_s", "s", "%.6f", "of this veto and all above it"),
+        ("dead_time_fraction", "1", "%.8f", "of the analysed time"),
+    ),
+    Column("removed", "int", "1", "%d", "strain transients removed"),
+    *_floats(
+        ("efficiency", "1", "%.6f", "fraction of strain transients removed"),
+        ("gain", "1", "%.6f", "fraction of the transients' weight removed"),
+        ("bound", "1", "%.6f", "gain that no choice of this dead time exceeds"),
+    ),
+    Column("chosen", "flag", meaning="whether the night applies the veto"),
+)
+
+#: Columns of ``planted.csv``: simulated signals added to the strain in memory.
+PLANTED: tuple[Column, ...] = (
+    Column("gps_time", "float", "s", "%.6f", "time of the peak or of the coalescence"),
+    Column("kind", "text", meaning="chirp or burst"),
+    Column("snr", "float", "1", "%.4f", "optimal signal-to-noise ratio"),
+    Column("found", "flag", meaning="whether a transient was found there"),
+    *_floats(
+        ("gps_start", "s", "%.6f", "start of the transient found"),
+        ("gps_end", "s", "%.6f", "its end"),
+        ("found_snr", "1", "%.4f", "its SNR"),
+    ),
+    Column("family", "text", meaning="the family that it was sorted into"),
 )
 
 #: Columns of a night's ``channels.csv``: how every channel of the list fared.
@@ -295,8 +344,21 @@ def csv_text(table: pd.DataFrame, columns: tuple[Column, ...]) -> str:
     return stream.getvalue()
 
 
-def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
+def csv_table(
+    text: str,
+    columns: tuple[Column, ...],
+    *,
+    keep: Callable[[pd.DataFrame], np.ndarray] | None = None,
+) -> pd.DataFrame:
     r"""Read back what :func:`csv_text` wrote; an empty cell is a missing value.
+
+    Parameters
+    ----------
+    text : str
+    columns : tuple of Column
+    keep : callable, optional
+        Says from the cells, as texts, which rows are wanted; the others are not
+        turned into values.
 
     Raises
     ------
@@ -313,6 +375,8 @@ def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
 
     try:
         cells = pd.read_csv(io.StringIO(text), dtype=str, keep_default_na=False)
+        if keep is not None:
+            cells = cells[keep(cells)].reset_index(drop=True)
         table = {c.name: _parse_column(cells[c.name], c) for c in columns}
     except (ValueError, KeyError, pd.errors.ParserError) as error:
         raise InputError(f"table does not read back: {error}") from error
@@ -321,7 +385,7 @@ def csv_table(text: str, columns: tuple[Column, ...]) -> pd.DataFrame:
 
 def _parse_column(cells: pd.Series, column: Column) -> pd.Series:
     if column.kind == "time_ns":
-        return cells.map(to_ns).astype("int64")
+        return pd.Series(to_ns_list(cells), index=cells.index, dtype="int64")
     known = cells.mask(cells == "")
     if column.kind == "flag":
         return known.map({"yes": True, "no": False})

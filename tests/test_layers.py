@@ -85,7 +85,7 @@ OWNERS = {
     "numba": {"conditioning", "tiles", "transients"},
     "matplotlib": {"report"},
     "jinja2": {"report"},
-    "astropy": {"gps"},
+    "erfa": {"gps"},
     "pydantic": {"config"},
     "click": {"cli"},
     "tqdm": {"cli"},

@@ -7,12 +7,17 @@ from typing import TYPE_CHECKING
 import click
 
 if TYPE_CHECKING:
-    import pandas as pd
-
     from dq.night import NightOutcome
+    from dq.night.judge import Verdict
 
 #: Lines that the list of what was left out may take; the files hold the rest.
 _LISTED = 20
+
+#: Said wherever a user decides about vetoes.
+CAUTION = (
+    "A veto can delete a discovery: look at what it removes before a search uses it. "
+    "The collaboration's own review has the last word."
+)
 
 
 def print_night(outcome: NightOutcome) -> None:
@@ -37,6 +42,7 @@ def _night_lines(summary: dict) -> list[str]:
         f"asked for; {summary['strain_transients']} strain transients",
         f"vetoes {len(summary['vetoes'])}: take {100 * dead:.2f} % of the analysed "
         f"time{removed} of the transients",
+        *summary["volume_time_ratio"].get("words", []),
     ]
 
 
@@ -52,26 +58,51 @@ def _print_left_out(outcome: NightOutcome) -> None:
         click.echo(f"and {len(lines) - _LISTED} more, see channels.csv")
 
 
-def print_vetoes(cost: pd.DataFrame) -> None:
-    """Print what each veto costs and removes."""
-    rows = [("veto", "category", "dead time", "removes", "use fraction")]
-    for row in cost.itertuples():
+def print_vetoes(verdict: Verdict) -> None:
+    """Print what each veto costs and removes, and what all bring to a search."""
+    from dq.cost import losing_vetoes, volume_sentence
+
+    heads = ("veto", "category", "dead time", "removes", "held out", "use fraction")
+    rows = [(*heads, "only by it", "signals lost", "volume x time")]
+    for row in verdict.cost.itertuples():
         rows.append(
             (
                 str(row.veto),
                 _cell(row.category, "{:d}"),
                 _cell(row.dead_time_s, "{:.3f} s"),
                 _cell(row.efficiency, "{:.2%}"),
+                _interval(row.held_out_low, row.held_out_high),
                 _cell(row.use_fraction, "{:.2%}"),
+                _cell(row.unique_removed, "{:d}"),
+                _cell(row.signal_loss, "{:.2%}"),
+                _cell(row.volume_time_ratio, "{:.3f}"),
             )
         )
     click.echo(align(rows))
+    choice = verdict.choice
+    if choice.gain == choice.gain:
+        click.echo(
+            f"choice: {choice.gain:.2%} of the transients' worth; no choice within the "
+            f"budget removes more than {choice.bound:.2%}"
+        )
+    click.echo(volume_sentence(verdict.volume))
+    for line in losing_vetoes(verdict.cost):
+        click.echo(line)
+    click.echo(CAUTION)
 
 
 def _cell(value, text: str) -> str:
     import pandas as pd
 
     return "-" if pd.isna(value) else text.format(value)
+
+
+def _interval(low, high) -> str:
+    import pandas as pd
+
+    if pd.isna(low):
+        return "-"
+    return f"{100 * low:.1f}-{100 * high:.1f} %"
 
 
 def align(rows: list[tuple[str, ...]]) -> str:

@@ -1,5 +1,26 @@
-"""Cost: dead time, efficiency and use of any veto segments."""
+"""Cost: what any veto segments remove, take away and bring to a search."""
 
-from dq.cost.cost import cost_of, measure
+from dq.cost.cost import ALL, cost_of, measure, union_of, veto_segments
+from dq.cost.held_out import Selection, alternate_blocks, held_out
+from dq.cost.signal_loss import random_times, signal_losses
+from dq.cost.volume import Background, VolumeTime, volume_time, volume_time_columns
+from dq.cost.words import losing_vetoes, volume_sentence
 
-__all__ = ["cost_of", "measure"]
+__all__ = [
+    "ALL",
+    "Background",
+    "Selection",
+    "VolumeTime",
+    "alternate_blocks",
+    "cost_of",
+    "held_out",
+    "losing_vetoes",
+    "measure",
+    "random_times",
+    "signal_losses",
+    "union_of",
+    "veto_segments",
+    "volume_sentence",
+    "volume_time",
+    "volume_time_columns",
+]

@@ -2,20 +2,53 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from dq.counting import binomial_chance
-from dq.segments import Segments, to_ns_array
+from dq.counting import binomial_chance, clopper_pearson
+from dq.segments import NS, Segments, to_ns_array
 from dq.tables import VETO_COST, conform
 
 if TYPE_CHECKING:
     import pandas as pd
 
+#: What a veto's own rows say of it.
+_NAMED = ("category", "source", "channel", "family")
+
+#: Name of the row that measures all vetoes together.
+ALL = "all"
+
+
+def veto_segments(vetoes: pd.DataFrame, analysed: Segments) -> dict[str, Segments]:
+    """Give each veto's analysed time, in the order of their first rows."""
+    return {
+        str(name): analysed
+        & Segments.from_arrays(
+            rows["gps_start"].to_numpy(np.int64), rows["gps_end"].to_numpy(np.int64)
+        )
+        for name, rows in vetoes.groupby("veto", sort=False)
+    }
+
+
+def union_of(vetoes: Iterable[Segments]) -> Segments:
+    """Give the time in any of some vetoes."""
+    vetoes = list(vetoes)
+    if not vetoes:
+        return Segments.none()
+    return Segments(
+        np.concatenate([v.starts for v in vetoes]),
+        np.concatenate([v.ends for v in vetoes]),
+    )
+
 
 def cost_of(
-    vetoes: pd.DataFrame, strain: pd.DataFrame, *, analysed: Segments
+    vetoes: pd.DataFrame,
+    strain: pd.DataFrame,
+    *,
+    analysed: Segments,
+    parts: Iterable[pd.DataFrame] = (),
 ) -> pd.DataFrame:
     """Measure each veto and all together.
 
@@ -26,19 +59,24 @@ def cost_of(
     strain : pandas.DataFrame
         ``dq.tables.TRANSIENTS``; transients whose peak was not analysed do not count.
     analysed : Segments
+    parts : iterable of pandas.DataFrame, optional
+        Further columns, measured elsewhere and indexed by the name of the veto:
+        ``held_out``, ``signal_losses``, ``volume_time_columns``.
 
     Returns
     -------
     pandas.DataFrame
         ``dq.tables.VETO_COST``: one row per veto and the row ``all``. Fractions of
-        nothing are missing. ``added_*`` count beyond the vetoes in the rows above;
-        held-out and signal-loss columns stay empty until they are measured.
+        nothing are missing. ``added_*`` count beyond the vetoes in the rows above,
+        ``unique_*`` what no other row of the table has.
 
     Notes
     -----
     A veto of the same dead time that knew nothing would remove each transient with
     probability dead time / analysed time; ``p_value`` is the binomial chance of
-    removing at least as many.
+    removing at least as many. Dead time is known without error, so the interval of
+    efficiency over dead time is the exact one of the efficiency (Clopper & Pearson
+    1934), divided.
     """
     import pandas as pd
 
@@ -47,23 +85,42 @@ def cost_of(
     judged = analysed.contains(times)
     times, snr = times[judged], snr[judged]
     rows = []
+    segments = veto_segments(vetoes, analysed)
+    firsts = vetoes.drop_duplicates("veto").set_index("veto")
+    alone = covered_once(list(segments.values()))
+    shared = np.sum([s.contains(times) for s in segments.values()], axis=0)
     union, gone = Segments.none(), np.zeros(len(times), dtype=bool)
-    for name, part in vetoes.groupby("veto", sort=False):
-        segments = analysed & Segments.from_arrays(
-            part["gps_start"].to_numpy(np.int64), part["gps_end"].to_numpy(np.int64)
-        )
-        first = part.iloc[0]
-        row = {k: first[k] for k in ("category", "source", "channel", "family")}
-        row |= {"veto": name, **measure(segments, times, snr, analysed)}
-        holds = segments.contains(times)
-        row["added_dead_time_s"] = (segments - union).total_s
+    for name, mine in segments.items():
+        row = {k: firsts.loc[name, k] for k in _NAMED}
+        row |= {"veto": name, **measure(mine, times, snr, analysed)}
+        holds = mine.contains(times)
+        row["added_dead_time_s"] = (mine - union).total_s
         row["added_removed"] = int(np.count_nonzero(holds & ~gone))
-        union, gone = union | segments, gone | holds
+        row["unique_dead_time_s"] = (mine & alone).total_s
+        row["unique_removed"] = int(np.count_nonzero(holds & (shared == 1)))
+        union, gone = union | mine, gone | holds
         rows.append(row)
-    total = {"veto": "all", **measure(union, times, snr, analysed)}
-    total["added_dead_time_s"] = total["dead_time_s"]
-    total["added_removed"] = total["removed"]
-    return conform(pd.DataFrame([*rows, total]), VETO_COST)
+    total = {"veto": ALL, **measure(union, times, snr, analysed)}
+    for kind in ("added", "unique"):
+        total[f"{kind}_dead_time_s"] = total["dead_time_s"]
+        total[f"{kind}_removed"] = total["removed"]
+    table = pd.DataFrame([*rows, total])
+    for part in parts:
+        table = table.join(part, on="veto")
+    return conform(table, VETO_COST)
+
+
+def covered_once(vetoes: list[Segments]) -> Segments:
+    """Give the time that exactly one of the vetoes covers."""
+    if not vetoes:
+        return Segments.none()
+    starts = np.concatenate([v.starts for v in vetoes])
+    ends = np.concatenate([v.ends for v in vetoes])
+    edges, where = np.unique(np.concatenate([starts, ends]), return_inverse=True)
+    step = np.bincount(where[: len(starts)], minlength=len(edges))
+    depth = np.cumsum(step - np.bincount(where[len(starts) :], minlength=len(edges)))
+    once = np.flatnonzero(depth == 1)
+    return Segments(edges[once], edges[once + 1])
 
 
 def measure(
@@ -90,17 +147,24 @@ def measure(
     removed = int(np.count_nonzero(holds))
     fraction = _share(segments.total_ns, analysed.total_ns)
     chance = 0.0 if np.isnan(fraction) else fraction
+    efficiency = _share(removed, len(times))
+    low, high = float("nan"), float("nan")
+    if len(times):
+        low, high = clopper_pearson(removed, len(times))
     return {
         "segments": len(segments),
-        "dead_time_s": segments.total_s,
+        "dead_time_s": segments.total_ns / NS,
         "dead_time_fraction": fraction,
         "removed": removed,
-        "efficiency": _share(removed, len(times)),
+        "efficiency": efficiency,
         "efficiency_snr8": _efficiency(holds, snr >= 8.0),
         "efficiency_snr20": _efficiency(holds, snr >= 20.0),
         "use_fraction": _share(len(np.unique(index[holds])), len(segments)),
         "expected_by_chance": len(times) * chance,
         "p_value": binomial_chance(removed, len(times), chance),
+        "efficiency_over_dead_time": _share(efficiency, chance),
+        "efficiency_over_dead_time_low": _share(low, chance),
+        "efficiency_over_dead_time_high": _share(high, chance),
     }
 
 

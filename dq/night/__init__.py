@@ -5,10 +5,30 @@ through them in worker processes (``pool``, ``channel``), keeps each result (``s
 in the output folder (``folder``), gathers them into tables (``ledger``), judges the
 strain (``judge``) and writes the files (``outputs``); ``run`` puts these in order and
 ``check`` looks at the inputs alone.
+
+The names below are fetched when first used: a verb that needs the folder alone does not
+wait for the engine.
 """
 
-from dq.night.inputs import read_inputs
-from dq.night.outputs import report_again, veto_again
-from dq.night.run import NightOutcome, run_night
+from __future__ import annotations
 
-__all__ = ["NightOutcome", "read_inputs", "report_again", "run_night", "veto_again"]
+from importlib import import_module
+from typing import Any
+
+_FACES = {
+    "NightOutcome": "dq.night.run",
+    "read_inputs": "dq.night.inputs",
+    "report_again": "dq.night.outputs",
+    "run_night": "dq.night.run",
+    "veto_again": "dq.night.outputs",
+}
+
+__all__ = list(_FACES)
+
+
+def __getattr__(name: str) -> Any:
+    """Fetch a public name from its module on first use (PEP 562)."""
+    if name not in _FACES:
+        raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+    globals()[name] = value = getattr(import_module(_FACES[name]), name)
+    return value

@@ -2,19 +2,23 @@
 
 from __future__ import annotations
 
+import logging
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 import pandas as pd
 
 from dq.config import Config
-from dq.cost import cost_of
+from dq.cost import Selection, veto_segments
+from dq.night.honest import Search, measure_vetoes
 from dq.night.ledger import Ledger
 from dq.segments import Segments, to_ns_array
 from dq.tables import STRAIN_TRANSIENTS, conform
-from dq.vetoes import build_vetoes, choose_vetoes
-from dq.witnesses import find_witnesses, veto_windows
+from dq.vetoes import Choice, build_vetoes, choose_vetoes
+from dq.witnesses import find_witnesses, windows_of
+
+log = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True)
@@ -29,8 +33,10 @@ class Verdict:
         ``dq.tables.WITNESSES``, ``VETOES`` (chosen ones only) and ``VETO_COST``.
     analysed : Segments
         Judged time of the strain.
-    refused : dict of str to str
-        Vetoes that were built and not chosen, with the reason.
+    choice : Choice
+        How the vetoes were chosen, and the reasons against the others.
+    volume : dict
+        ``volume_time_ratio`` of the summary.
     """
 
     strain: pd.DataFrame
@@ -38,30 +44,75 @@ class Verdict:
     vetoes: pd.DataFrame
     cost: pd.DataFrame
     analysed: Segments
-    refused: dict[str, str]
+    choice: Choice
+    volume: dict = field(default_factory=dict)
 
 
-def judge(ledger: Ledger, config: Config) -> Verdict:
+def judge(
+    ledger: Ledger,
+    config: Config,
+    *,
+    planted: pd.DataFrame | None = None,
+    search: Search | None = None,
+) -> Verdict:
     """Find witnesses, choose vetoes within the dead-time budget, and cost them.
 
     Parameters
     ----------
     ledger : Ledger
+        Where the strain is sorted, families can be vetoed and weighed.
     config : Config
+    planted : pandas.DataFrame, optional
+        ``dq.tables.PLANTED``.
+    search : Search, optional
+        Triggers for the volume-time ratio; by default the strain's transients.
 
     Returns
     -------
     Verdict
     """
-    name = ledger.strain
-    strain = ledger.transients[name]
-    auxiliary = {k: v for k, v in ledger.transients.items() if k != name}
+    strain = ledger.sorted_strain
+    analysed = ledger.time("analysed")[ledger.strain]
+    witnesses, built, choice = _decide(ledger, config, analysed)
+    vetoes = _in_order(built, choice.chosen)
+    _mention_absent_families(config, strain)
+
+    def select(part: Segments) -> Selection:
+        _, other, chosen = _decide(ledger, config, part, whole=analysed)
+        return Selection(veto_segments(other, analysed), chosen.chosen)
+
+    cost, volume = measure_vetoes(
+        vetoes,
+        strain,
+        select,
+        analysed=analysed,
+        settings=config.vetoes,
+        planted=planted,
+        search=search,
+    )
+    table = strain_table(strain, witnesses, _auxiliary(ledger), vetoes)
+    return Verdict(table, witnesses, vetoes, cost, analysed, choice, volume)
+
+
+def _auxiliary(ledger: Ledger) -> dict[str, pd.DataFrame]:
+    return {k: v for k, v in ledger.transients.items() if k != ledger.strain}
+
+
+def _decide(
+    ledger: Ledger, config: Config, part: Segments, *, whole: Segments | None = None
+) -> tuple[pd.DataFrame, pd.DataFrame, Choice]:
+    """Select witnesses, build vetoes and choose, from the strain within some time.
+
+    The vetoes are built over all of the time ``whole``, but chosen by what they remove
+    and cost within ``part``.
+    """
+    strain, auxiliary = ledger.sorted_strain, _auxiliary(ledger)
     judged = ledger.time("analysed")
-    analysed = judged.pop(name)
+    judged.pop(ledger.strain)
     witnesses = find_witnesses(
         strain,
         auxiliary,
-        analysed=analysed,
+        analysed=part,
         auxiliary_analysed=judged,
         safety=ledger.safety,
         settings=config.witnesses,
@@ -69,22 +120,27 @@ def judge(ledger: Ledger, config: Config) -> Verdict:
     built = build_vetoes(
         witnesses,
         auxiliary,
-        ledger.faults(name),
-        analysed=analysed,
+        ledger.faults(ledger.strain),
+        analysed=part if whole is None else whole,
         settings=config.vetoes,
+        strain=strain,
     )
-    chosen, refused = choose_vetoes(
+    choice = choose_vetoes(
         built,
         strain,
-        analysed=analysed,
+        analysed=part,
         max_dead_time=config.vetoes.max_dead_time,
+        weights=config.vetoes.weights,
+        family_weights=config.vetoes.family_weights,
     )
-    vetoes = _in_order(built, chosen)
-    cost = cost_of(vetoes, strain, analysed=analysed)
-    table = strain_table(strain, witnesses, auxiliary, vetoes)
-    if ledger.families is not None:
-        table = table.assign(**{c: ledger.families[c].array for c in ledger.families})
-    return Verdict(table, witnesses, vetoes, cost, analysed, refused)
+    return witnesses, built, choice
+
+
+def _mention_absent_families(config: Config, strain: pd.DataFrame) -> None:
+    known = set(strain["family"].dropna()) if "family" in strain else set()
+    for name in config.vetoes.strain_families:
+        if name not in known:
+            log.warning("no transient is sorted into family %r: no veto of it", name)
 
 
 def _in_order(built: pd.DataFrame, chosen: list[str]) -> pd.DataFrame:
@@ -112,27 +168,26 @@ def strain_table(
     Returns
     -------
     pandas.DataFrame
-        ``dq.tables.STRAIN_TRANSIENTS``; families are ``unsorted``.
+        ``dq.tables.STRAIN_TRANSIENTS``; families are ``unsorted`` where
+        the strain's table has none.
     """
     times_ns = to_ns_array(strain["gps_time"].to_numpy(float))
     accepted = witnesses[witnesses["accepted"].fillna(False).astype(bool)]
-    seen = {}
+    seen: dict[str, np.ndarray] = {}
     for row in accepted.itertuples():
-        windows = veto_windows(
-            auxiliary[row.channel],
-            snr_threshold=float(row.snr_threshold),
-            half_window_s=float(row.half_window_s),
-        )
-        seen[row.channel] = windows.contains(times_ns)
+        # a channel may be a witness of several families, each with its own windows
+        active = windows_of(row, auxiliary[row.channel]).contains(times_ns)
+        seen[row.channel] = seen.get(row.channel, False) | active
     covered = {
         str(name): Segments.from_arrays(
             rows["gps_start"].to_numpy(np.int64), rows["gps_end"].to_numpy(np.int64)
         ).contains(times_ns)
         for name, rows in vetoes.groupby("veto", sort=False)
     }
+    family = strain.get("family", "unsorted")
     table = strain.assign(
         transient_id=transient_ids(strain),
-        family="unsorted",
+        family=family,
         witness=_joined(seen, len(strain)),
         veto=_joined(covered, len(strain)),
     )

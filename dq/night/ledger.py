@@ -20,6 +20,7 @@ from dq.store import Channel
 from dq.tables import (
     COVERAGE,
     NIGHT_CHANNELS,
+    PLANTED,
     STRAIN_TRANSIENTS,
     Column,
     conform,
@@ -42,6 +43,7 @@ _FAMILY = ("family", "probability", "family_set", "novelty")
 
 #: What the sorter says of a transient: columns of ``strain_transients.csv``.
 FAMILY_COLUMNS = tuple(c for c in STRAIN_TRANSIENTS if c.name in _FAMILY)
+PLANTED_FILE = "planted.csv"
 
 _ACCOUNTED = ("analysed", "missing", "unjudged")
 
@@ -73,6 +75,14 @@ class Ledger:
     coverage: pd.DataFrame
     features: pd.DataFrame | None = None
     families: pd.DataFrame | None = None
+
+    @property
+    def sorted_strain(self) -> pd.DataFrame:
+        """The strain's transients, with what the sorter said where it did."""
+        table = self.transients[self.strain]
+        if self.families is None:
+            return table
+        return table.assign(**{c: self.families[c].array for c in self.families})
 
     def time(self, kind: str) -> dict[str, Segments]:
         """Give the segments of one kind for every analysed channel."""
@@ -252,3 +262,26 @@ def _read_table(path: Path, columns, *, rows: int | None = None):
             "the night again"
         )
     return table
+
+
+def write_planted(directory: Path, planted: pd.DataFrame | None) -> None:
+    """Write the simulated signals of a night; without any there is no file."""
+    from dq.writers import write_table
+
+    path = directory / PLANTED_FILE
+    if planted is None:
+        path.unlink(missing_ok=True)
+    else:
+        write_table(path, planted, PLANTED)
+
+
+def read_planted(directory: Path) -> pd.DataFrame | None:
+    """Read the simulated signals of a night's folder; None where none were planted.
+
+    Raises
+    ------
+    InputError
+        The table is damaged.
+    """
+    path = directory / PLANTED_FILE
+    return _read_table(path, PLANTED) if path.exists() else None

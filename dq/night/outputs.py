@@ -6,6 +6,8 @@ import logging
 from collections.abc import Callable
 from pathlib import Path
 
+import pandas as pd
+
 from dq.config import Config, digest, parse_config
 from dq.errors import InputError
 from dq.night.folder import (
@@ -15,6 +17,7 @@ from dq.night.folder import (
     read_manifest,
     write_manifest,
 )
+from dq.night.honest import Search
 from dq.night.judge import Verdict, judge
 from dq.night.ledger import (
     CHANNELS_FILE,
@@ -25,6 +28,8 @@ from dq.night.ledger import (
     TRANSIENTS_FILE,
     Ledger,
     read_ledger,
+    read_planted,
+    write_planted,
 )
 from dq.night.plan import NightPlan
 from dq.night.summary import summarise_night
@@ -34,6 +39,7 @@ from dq.tables import (
     NIGHT_CHANNELS,
     STRAIN_TRANSIENTS,
     VETO_COST,
+    VETO_CURVE,
     VETOES,
     WITNESSES,
 )
@@ -89,6 +95,7 @@ def write_night(
     ledger: Ledger,
     manifest: dict,
     *,
+    planted: pd.DataFrame | None = None,
     lap: Callable[[str], None] = lambda stage: None,
 ) -> Verdict:
     """Write the channels' tables and all that follows from them.
@@ -113,6 +120,7 @@ def write_night(
     write_table(directory / CHANNELS_FILE, ledger.channels, NIGHT_CHANNELS)
     write_table(directory / COVERAGE_FILE, ledger.coverage, COVERAGE)
     _write_features(directory, ledger)
+    write_planted(directory, planted)
     lap("tables")
     return write_verdict(directory, config, manifest, lap=lap)
 
@@ -144,6 +152,7 @@ def write_verdict(
     config: Config,
     manifest: dict,
     *,
+    search: Search | None = None,
     lap: Callable[[str], None] = lambda stage: None,
 ) -> Verdict:
     """Judge a folder's channel tables again and write what follows from them.
@@ -155,8 +164,9 @@ def write_verdict(
     from dq.writers import write_table
 
     ledger = read_ledger(directory, config.site.strain)
-    verdict = judge(ledger, config)
-    for name, reason in verdict.refused.items():
+    planted = read_planted(directory)
+    verdict = judge(ledger, config, planted=planted, search=search)
+    for name, reason in verdict.choice.refused.items():
         log.info("veto %s not chosen: %s", name, reason)
     lap("witnesses and vetoes")
     for name, table, columns in (
@@ -164,6 +174,7 @@ def write_verdict(
         ("witnesses.csv", verdict.witnesses, WITNESSES),
         ("vetoes.csv", verdict.vetoes, VETOES),
         ("veto_cost.csv", verdict.cost, VETO_COST),
+        ("veto_curve.csv", verdict.choice.curve, VETO_CURVE),
     ):
         write_table(directory / name, table, columns)
     _write_machine_files(directory, ledger, verdict, manifest)
@@ -219,7 +230,12 @@ def finished_night(directory: Path) -> NightFolder:
     return NightFolder(directory)
 
 
-def veto_again(directory: str | Path, *, max_dead_time: float | None = None) -> Verdict:
+def veto_again(
+    directory: str | Path,
+    *,
+    max_dead_time: float | None = None,
+    search: Search | None = None,
+) -> Verdict:
     """Choose and cost vetoes again from a finished night; no data are read.
 
     Parameters
@@ -227,6 +243,9 @@ def veto_again(directory: str | Path, *, max_dead_time: float | None = None) -> 
     directory : str or Path
     max_dead_time : float, optional
         Fraction of the analysed time; by default the night's own.
+    search : Search, optional
+        The user's search, whose triggers then are the background of the volume-time
+        ratio instead of the strain's transients.
 
     Returns
     -------
@@ -246,13 +265,13 @@ def veto_again(directory: str | Path, *, max_dead_time: float | None = None) -> 
         config = parse_config(settings, where=str(directory / MANIFEST))
         read_ledger(directory, config.site.strain)
         folder.start_log()
-        if manifest["settings_sha256"] != digest(config):
+        if manifest["settings_sha256"] != digest(config) or search is not None:
             # dq night with the file's own settings must notice the difference
             manifest["settings_sha256"] = digest(config)
             manifest["request_sha256"] = ""
         manifest["state"] = "running"
         folder.write_manifest(manifest)
-        return write_verdict(directory, config, manifest)
+        return write_verdict(directory, config, manifest, search=search)
 
 
 def report_again(directory: str | Path) -> Path:

@@ -8,6 +8,7 @@ import time
 from collections.abc import Callable
 from dataclasses import dataclass, field
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 from dq.config import Config
 from dq.errors import NoDataError
@@ -21,6 +22,9 @@ from dq.night.plan import NightPlan, plan_night
 from dq.night.pool import make_pool, run_tasks
 from dq.night.products import product_rows
 from dq.night.state import load_state
+
+if TYPE_CHECKING:
+    import pandas as pd
 
 log = logging.getLogger(__name__)
 
@@ -116,7 +120,9 @@ def run_night(
         ledger = with_families(plan, folder, ledger)
         clock.lap("features")
         manifest = new_manifest(plan, ledger, left_out)
-        write_night(out, config, ledger, manifest, lap=clock.lap)
+        planted = _planted(plan, results[config.site.strain])
+        clock.lap("planted signals")
+        write_night(out, config, ledger, manifest, planted=planted, lap=clock.lap)
         return _outcome(out, manifest, clock)
 
 
@@ -155,6 +161,24 @@ def _channels(
         if task.channel not in failed:
             results[task.channel] = load_state(task.state, task.key)
     return {k: v for k, v in results.items() if v is not None}, failed
+
+
+def _planted(plan: NightPlan, strain: ChannelResult) -> pd.DataFrame | None:
+    """Plant signals where vetoes rest on the strain itself; None elsewhere."""
+    inputs, settings = plan.inputs, plan.inputs.config.vetoes
+    if not settings.strain_families or not settings.signal_loss_plants:
+        return None
+    from dq.night.planting import plant_signals
+
+    row = inputs.strain
+    return plant_signals(
+        inputs.store.channel(row.name),
+        strain,
+        ready=inputs.wanted,
+        config=inputs.config,
+        f_low_hz=row.f_low_hz,
+        f_high_hz=row.f_high_hz,
+    )
 
 
 def _problems(inputs: Inputs, left_out: dict[str, str]) -> dict[str, str]:

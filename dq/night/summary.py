@@ -5,6 +5,9 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
+from dq.cost import losing_vetoes, volume_sentence
+from dq.counting import clopper_pearson
+from dq.night.honest import total_row
 from dq.night.judge import Verdict
 from dq.night.ledger import Ledger
 from dq.segments import NS, to_ns
@@ -44,6 +47,7 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
             for name, count in strain["family"].value_counts().sort_index().items()
         },
         "untraced_fraction": float(1 - traced.mean()) if len(strain) else _UNKNOWN,
+        "untraced_interval": _interval(len(strain) - int(traced.sum()), len(strain)),
         "vetoes": list(dict.fromkeys(verdict.vetoes["veto"])),
         "dead_time_s": total["dead_time_s"],
         "dead_time_fraction": total["dead_time_fraction"],
@@ -52,7 +56,7 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
             "snr8": total["efficiency_snr8"],
             "snr20": total["efficiency_snr20"],
         },
-        "volume_time_ratio": {"value": _UNKNOWN, "low": _UNKNOWN, "high": _UNKNOWN},
+        "volume_time_ratio": verdict.volume | {"words": _words(verdict)},
         "channels": {
             "ok": sum("@" not in name for name in ledger.transients),
             "left_out": manifest["left_out"],
@@ -62,8 +66,16 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
     }
 
 
+def _words(verdict: Verdict) -> list[str]:
+    return [volume_sentence(verdict.volume), *losing_vetoes(verdict.cost)]
+
+
+def _interval(count: int, trials: int) -> list[float] | None:
+    return list(clopper_pearson(count, trials)) if trials else _UNKNOWN
+
+
 def _total_row(cost: pd.DataFrame) -> dict[str, float]:
-    row = cost[cost["veto"] == "all"].iloc[0]
+    row = total_row(cost)
     names = ("dead_time_s", "dead_time_fraction")
     names += ("efficiency", "efficiency_snr8", "efficiency_snr20")
     return {n: np.nan if pd.isna(row[n]) else float(row[n]) for n in names}

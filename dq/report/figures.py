@@ -120,26 +120,49 @@ def _unjudged_hatch(axes, night: NightTables) -> None:
         )
 
 
-def removal_curve(night: NightTables) -> str:
-    """Draw the fraction removed against dead time, veto after veto."""
-    parts = night.cost[night.cost["veto"] != "all"]
-    total = max(len(night.strain), 1)
-    dead = np.append(0, np.cumsum(parts["added_dead_time_s"].to_numpy(float)))
-    gone = np.append(0, np.cumsum(parts["added_removed"].to_numpy(float))) / total
-    analysed = max(night.time("analysed").total_s, 1e-9)
+def trade_off(night: NightTables) -> str:
+    """Draw what each dead time removes, and what no choice could exceed."""
+    curve = night.curve
+    dead = 100 * curve["dead_time_fraction"].to_numpy(float)
+    gain = 100 * curve["gain"].to_numpy(float)
+    chosen = curve["chosen"].fillna(False).to_numpy(bool)
+    budget = night.manifest["config"].get("vetoes", {}).get("max_dead_time")
     with mpl.rc_context(_STYLE):
         figure = Figure(figsize=(5.4, 3.8), layout="constrained")
         axes = figure.subplots()
-        dead = 100 * dead / analysed
-        axes.step(dead, 100 * gone, where="post", color="#0072B2", linewidth=1.2)
-        axes.plot(dead, 100 * gone, "o", color="#0072B2", label="vetoes, in order")
-        right = max(dead[-1] * 1.15, 0.1)
-        axes.plot([0, right], [0, right], "--", color="#7f8c96", label="chance")
+        right = max(np.max(dead, initial=0.0) * 1.12, 0.1)
+        axes.plot([0, right], [0, right], ":", color="#7f8c96", label="chance")
+        if np.isfinite(gain).any():
+            bound = 100 * curve["bound"].to_numpy(float)
+            axes.plot(dead, bound, "--", color="#D55E00", label="no choice exceeds")
+            axes.step(dead, gain, where="post", color="#0072B2", linewidth=1.2)
+            for inside, face, label in (
+                (chosen, "#0072B2", "vetoes applied"),
+                (~chosen, "white", "further vetoes"),
+            ):
+                axes.plot(
+                    dead[inside],
+                    gain[inside],
+                    "o",
+                    markeredgecolor="#0072B2",
+                    markerfacecolor=face,
+                    label=label,
+                )
+        if budget is not None and 100 * budget <= right:
+            axes.axvline(100 * budget, color=_INK, linewidth=0.8)
+            axes.annotate(
+                "budget",
+                (100 * budget, 2),
+                xytext=(3, 0),
+                textcoords="offset points",
+                fontsize=8,
+                color=_INK,
+            )
         axes.set_xlim(0, right)
         axes.set_ylim(0, 100)
         axes.set_xlabel("dead time (% of analysed time)")
-        axes.set_ylabel("transients removed (%)")
-        axes.legend(frameon=False, loc="lower right")
+        axes.set_ylabel("removed (% of the transients' worth)")
+        axes.legend(frameon=False, loc="upper left", fontsize=8)
         axes.grid(alpha=0.25)
         return _png(figure)
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -16,10 +17,12 @@ from dq.tables import (
     NIGHT_CHANNELS,
     STRAIN_TRANSIENTS,
     VETO_COST,
+    VETO_CURVE,
     VETOES,
     WITNESSES,
     Column,
     csv_table,
+    empty,
 )
 
 _TABLES: dict[str, tuple[str, tuple[Column, ...]]] = {
@@ -27,6 +30,7 @@ _TABLES: dict[str, tuple[str, tuple[Column, ...]]] = {
     "witnesses": ("witnesses.csv", WITNESSES),
     "vetoes": ("vetoes.csv", VETOES),
     "cost": ("veto_cost.csv", VETO_COST),
+    "curve": ("veto_curve.csv", VETO_CURVE),
     "channels": ("channels.csv", NIGHT_CHANNELS),
     "coverage": ("coverage.csv", COVERAGE),
 }
@@ -43,7 +47,7 @@ class NightTables:
         Requested range.
     site, strain_name : str
     manifest, summary : dict
-    strain, witnesses, vetoes, cost, channels, coverage : pandas.DataFrame
+    strain, witnesses, vetoes, cost, curve, channels, coverage : pandas.DataFrame
     """
 
     directory: Path
@@ -57,6 +61,7 @@ class NightTables:
     witnesses: pd.DataFrame
     vetoes: pd.DataFrame
     cost: pd.DataFrame
+    curve: pd.DataFrame
     channels: pd.DataFrame
     coverage: pd.DataFrame
 
@@ -80,8 +85,21 @@ def segments_of(rows: pd.DataFrame) -> Segments:
     )
 
 
-def read_night(directory: str | Path) -> NightTables:
+def read_night(
+    directory: str | Path,
+    *,
+    tables: Iterable[str] | None = None,
+    keep: Mapping[str, Callable] | None = None,
+) -> NightTables:
     """Read a night's folder.
+
+    Parameters
+    ----------
+    directory : str or Path
+    tables : iterable of str, optional
+        The tables that are needed, by attribute; the others stay empty. Default: all.
+    keep : mapping of str to callable, optional
+        By attribute, what :func:`dq.tables.csv_table` takes to keep some rows only.
 
     Raises
     ------
@@ -91,7 +109,13 @@ def read_night(directory: str | Path) -> NightTables:
     directory = Path(directory)
     manifest = _json(directory, "manifest.json")
     summary = _json(directory, "summary.json")
-    tables = {key: _table(directory, *spec) for key, spec in _TABLES.items()}
+    wanted = set(_TABLES if tables is None else tables)
+    read = {
+        key: _table(directory, *spec, keep=(keep or {}).get(key))
+        if key in wanted
+        else empty(spec[1])
+        for key, spec in _TABLES.items()
+    }
     try:
         site = manifest["config"]["site"]
         return NightTables(
@@ -102,7 +126,7 @@ def read_night(directory: str | Path) -> NightTables:
             strain_name=site["strain"],
             manifest=manifest,
             summary=summary,
-            **tables,
+            **read,
         )
     except (KeyError, TypeError) as error:
         raise InputError(
@@ -120,9 +144,16 @@ def _json(directory: Path, name: str) -> dict:
         ) from error
 
 
-def _table(directory: Path, name: str, columns: tuple[Column, ...]) -> pd.DataFrame:
+def _table(
+    directory: Path,
+    name: str,
+    columns: tuple[Column, ...],
+    *,
+    keep: Callable | None = None,
+) -> pd.DataFrame:
     try:
-        table = csv_table((directory / name).read_text(encoding="utf-8"), columns)
+        text = (directory / name).read_text(encoding="utf-8")
+        table = csv_table(text, columns, keep=keep)
     except (OSError, UnicodeDecodeError) as error:
         raise InputError(
             f"cannot read {str(directory / name)!r}: {error}; run the night again"

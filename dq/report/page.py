@@ -6,6 +6,7 @@ from pathlib import Path
 
 import pandas as pd
 
+from dq.cost import losing_vetoes, volume_sentence
 from dq.gps import gps_to_utc_text
 from dq.report.night_tables import NightTables, read_night
 from dq.segments import NS, seconds_text
@@ -45,7 +46,7 @@ def render(night: NightTables) -> str:
     """Render the page; equal tables give equal text."""
     from jinja2 import Environment, PackageLoader, StrictUndefined
 
-    from dq.report.figures import map_of_transients, removal_curve, snr_distribution
+    from dq.report.figures import map_of_transients, snr_distribution, trade_off
 
     environment = Environment(
         loader=PackageLoader("dq.report"),
@@ -64,7 +65,8 @@ def render(night: NightTables) -> str:
         facts=facts(night),
         sentences=sentences(night),
         map=map_of_transients(night),
-        removal=removal_curve(night),
+        curve=trade_off(night),
+        worth=worth(night),
         distribution=snr_distribution(night),
         vetoes=_vetoes(night),
         witnesses=_witnesses(night.accepted()),
@@ -136,9 +138,11 @@ def sentences(night: NightTables) -> list[str]:
         out.append(f"{names}{more} {verb} left out; the reasons stand below.")
     untraced = night.summary.get("untraced_fraction")
     if untraced is not None and len(night.strain):
+        low, high = night.summary.get("untraced_interval") or (None, None)
+        sure = "" if low is None else f" (95 % interval {_interval(low, high)})"
         out.append(
             f"No accepted witness was active at {percent(untraced)} of the strain's "
-            "transients."
+            f"transients{sure}."
         )
     if not len(night.strain):
         out.append("No transient was found above the threshold.")
@@ -165,11 +169,41 @@ def _vetoes(night: NightTables) -> list[dict]:
                 "loudest": percent(row.efficiency_snr20),
                 "use": percent(row.use_fraction),
                 "chance": f"{row.expected_by_chance:.2f}",
-                "added": row.added_removed,
-                "added_dead": f"{row.added_dead_time_s:.2f}",
+                "held": _interval(row.held_out_low, row.held_out_high),
+                "over": _number(row.efficiency_over_dead_time, "{:.3g}"),
+                "over_range": _range(
+                    row.efficiency_over_dead_time_low,
+                    row.efficiency_over_dead_time_high,
+                ),
+                "lost_range": _interval(row.signal_loss_low, row.signal_loss_high),
+                "volume_beside": _number(row.volume_time_unique, "{:.3f}"),
+                "only": row.unique_removed,
+                "only_dead": f"{row.unique_dead_time_s:.2f}",
+                "lost": percent(row.signal_loss, 2),
+                "volume": _number(row.volume_time_ratio, "{:.3f}"),
             }
         )
     return rows
+
+
+def _interval(low, high) -> str:
+    return "–" if pd.isna(low) else f"{100 * low:.1f}–{100 * high:.1f} %"
+
+
+def _range(low, high) -> str:
+    return "–" if pd.isna(low) else f"{low:.3g}–{high:.3g}"
+
+
+def _number(value, text: str) -> str:
+    return "–" if pd.isna(value) else text.format(value)
+
+
+def worth(night: NightTables) -> list[str]:
+    """Say what the vetoes do to a search, and which of them lose."""
+    if len(night.cost) < 2:
+        return []
+    volume = night.summary.get("volume_time_ratio") or {}
+    return [volume_sentence(volume), *losing_vetoes(night.cost)]
 
 
 def _text(value) -> str:

@@ -3,7 +3,7 @@
 from dq.store.channels import Channel, read_channel_list
 from dq.store.headers import Problem
 from dq.store.index import Store, open_store
-from dq.store.lists import read_injections, read_ready
+from dq.store.lists import read_injections, read_ready, read_triggers
 from dq.store.reader import ChannelData, Series
 
 __all__ = [
@@ -16,4 +16,5 @@ __all__ = [
     "read_channel_list",
     "read_injections",
     "read_ready",
+    "read_triggers",
 ]

@@ -91,6 +91,8 @@ def check_name(name: str, where: str) -> str:
 def read_rows(path: Path, what: str, required: tuple[str, ...], known) -> list[dict]:
     """Read a CSV file with a header; give rows with their line number as ``line``.
 
+    ``known`` lists the columns that may stand there; None: any.
+
     Raises
     ------
     InputError
@@ -106,7 +108,7 @@ def read_rows(path: Path, what: str, required: tuple[str, ...], known) -> list[d
             f"{what} {str(path)!r}: column {missing[0]!r} is missing; the header line "
             f"must hold {', '.join(required)}"
         )
-    extra = [c for c in header if c not in known]
+    extra = [c for c in header if known is not None and c not in known]
     if extra:
         raise InputError(
             f"{what} {str(path)!r}: unknown column {extra[0]!r}; known are "

@@ -57,3 +57,37 @@ def read_injections(path: Path) -> pd.DataFrame:
             "snr": pd.Series(snrs, dtype="float64"),
         }
     )
+
+
+def read_triggers(path: Path) -> pd.DataFrame:
+    """Read the triggers of a user's own search.
+
+    Returns
+    -------
+    pandas.DataFrame
+        Columns ``gps_time`` (s) and ``snr``, in the order of the file; what else the
+        file holds is left alone.
+
+    Raises
+    ------
+    InputError
+        A column is absent, there is no trigger, or a value is no number.
+    """
+    import pandas as pd
+
+    what = "search triggers"
+    rows = read_rows(path, what, ("gps_time", "snr"), None)
+    times, snrs = [], []
+    for row in rows:
+        where = f"{what} {str(path)!r} line {row['line']}"
+        try:
+            times.append(to_ns(row["gps_time"]) / 1e9)
+        except SegmentError as error:
+            raise InputError(f"{where}: {error}") from error
+        snr = positive(row, "snr", where)
+        if snr is None:
+            raise InputError(f"{where}: snr is empty; give each trigger's")
+        snrs.append(snr)
+    if not rows:
+        raise InputError(f"{what} {str(path)!r} holds no trigger; check the file")
+    return pd.DataFrame({"gps_time": times, "snr": snrs}, dtype="float64")

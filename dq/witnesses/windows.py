@@ -7,25 +7,67 @@ import numpy as np
 from dq.segments import NS, Segments, to_ns_array
 
 
-def veto_windows(transients, *, snr_threshold: float, half_window_s: float) -> Segments:
-    """Give the union of windows around the transients at or above a threshold.
+def veto_windows(
+    transients,
+    *,
+    snr_threshold: float,
+    before_s: float,
+    after_s: float,
+    delay_s: float = 0.0,
+) -> Segments:
+    """Give the union of windows around a channel's activity above a threshold.
 
     Parameters
     ----------
     transients : pandas.DataFrame
-        Columns ``gps_time`` and ``snr``.
+        Columns ``gps_start``, ``gps_end`` and ``snr``.
     snr_threshold : float
-    half_window_s : float
-        A window is ``[t - w, t + w)`` around each peak time.
+    before_s, after_s : float
+        A window is ``[gps_start - before, gps_end + after)``, moved by the delay.
+    delay_s : float
+        Strain minus channel, s.
 
     Returns
     -------
     Segments
     """
     loud = transients["snr"].to_numpy(float) >= snr_threshold
-    times = to_ns_array(transients["gps_time"].to_numpy(float)[loud])
-    half = round(half_window_s * NS)
-    return Segments.from_arrays(times - half, times + half)
+    starts = to_ns_array(transients["gps_start"].to_numpy(float)[loud])
+    ends = to_ns_array(transients["gps_end"].to_numpy(float)[loud])
+    delay = round(delay_s * NS)
+    starts = starts + (delay - round(before_s * NS))
+    ends = ends + (delay + round(after_s * NS))
+    return Segments.from_arrays(starts, np.maximum(starts, ends))
+
+
+def windows_of(witness, transients) -> Segments:
+    """Give the windows of one row of the witnesses' table.
+
+    Parameters
+    ----------
+    witness : namedtuple
+        A row of ``dq.tables.WITNESSES``; where it tells no window of its own,
+        ``half_window_s`` reaches both ways.
+    transients : pandas.DataFrame
+        The channel's.
+
+    Returns
+    -------
+    Segments
+    """
+
+    def known(name: str, otherwise: float) -> float:
+        value = getattr(witness, name, None)
+        return otherwise if value is None or value != value else float(value)
+
+    half = float(witness.half_window_s)
+    return veto_windows(
+        transients,
+        snr_threshold=float(witness.snr_threshold),
+        before_s=known("before_s", half),
+        after_s=known("after_s", half),
+        delay_s=known("delay_s", 0.0),
+    )
 
 
 def union_of_windows(times: np.ndarray, half: int) -> tuple[np.ndarray, np.ndarray]:

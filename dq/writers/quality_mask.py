@@ -26,7 +26,7 @@ _FIXED = (
     ("ANALYSED", "the whole second was analysed; without it, it was not judged"),
     ("CATEGORY_1", "data cannot be used in part of the second"),
     ("CATEGORY_2", "a safe witness with an understood coupling was active"),
-    ("CATEGORY_3", "a witness by statistical association was active"),
+    ("CATEGORY_3", "a statistical association, or a family of the strain itself"),
 )
 
 

@@ -20,6 +20,7 @@ KEYS = (
     "strain_transients",
     "families",
     "untraced_fraction",
+    "untraced_interval",
     "vetoes",
     "dead_time_s",
     "dead_time_fraction",

@@ -56,7 +56,10 @@ def write_transients_h5(
 
 
 def read_transients_h5(
-    path: str | Path, channels: Iterable[str] | None = None
+    path: str | Path,
+    channels: Iterable[str] | None = None,
+    *,
+    columns: Iterable[str] | None = None,
 ) -> dict[str, pd.DataFrame]:
     """Read the transients of some or all channels.
 
@@ -65,6 +68,8 @@ def read_transients_h5(
     path : str or Path
     channels : iterable of str, optional
         Channels that the file does not hold are left out of the result.
+    columns : iterable of str, optional
+        Only these are read; by default all.
 
     Raises
     ------
@@ -82,6 +87,9 @@ def read_transients_h5(
             names = (
                 list(file) if channels is None else [c for c in channels if c in file]
             )
+            if columns is not None:
+                columns = tuple(columns)
+                return {name: _some(file[name], columns) for name in names}
             return {name: _table(file[name]) for name in names}
     except (OSError, KeyError) as error:
         text = " ".join(str(error).split())
@@ -94,3 +102,7 @@ def _table(group: h5py.Group) -> pd.DataFrame:
     return conform(
         pd.DataFrame({c.name: group[c.name][:] for c in TRANSIENTS}), TRANSIENTS
     )
+
+
+def _some(group: h5py.Group, columns: tuple[str, ...]) -> pd.DataFrame:
+    return pd.DataFrame({name: group[name][:] for name in columns})

@@ -2,6 +2,7 @@
 
 import csv
 import io
+import json
 import os
 import signal
 import subprocess
@@ -145,6 +146,56 @@ def test_veto_prints_the_cost(done, capsys):
     lines = capsys.readouterr().out.splitlines()
     assert lines[0].split()[0] == "veto"
     assert any(line.startswith("all") for line in lines)
+
+
+def test_veto_says_what_the_user_decides(done, capsys):
+    _, out, _ = done
+    assert main(["veto", str(out)]) == 0
+    text = capsys.readouterr().out
+    assert "A veto can delete a discovery" in text
+    assert "collaboration's own review has the last word" in text
+    assert "no choice within the budget removes more than" in text
+
+
+def test_veto_on_the_triggers_of_a_search(done, tmp_path, capsys):
+    _, out, _ = done
+    path = tmp_path / "mine.csv"
+    lines = [f"{SITE_START + 20 + k * 2.5},{6 + k % 9},x" for k in range(80)]
+    lines += [f"{SITE_START + at + d},300,x" for at in SITE_BURSTS for d in (0, 0.02)]
+    path.write_text("\n".join(["gps_time,snr,template", *lines]) + "\n")
+    before = (out / "vetoes.csv").read_bytes()
+    assert main(["veto", str(out), "--search-triggers", str(path)]) == 0
+    text = capsys.readouterr().out
+    assert "Against the triggers of mine.csv" in text
+    assert "the vetoes gain more than they lose" in text
+    assert (out / "vetoes.csv").read_bytes() == before
+    summary = json.loads((out / "summary.json").read_text())
+    volume = summary["volume_time_ratio"]
+    assert volume["low"] <= volume["value"] <= volume["high"]
+    assert volume["background"] == "triggers of mine.csv"
+    assert main(["veto", str(out)]) == 0
+
+
+@pytest.mark.parametrize(
+    ("text", "told"),
+    [
+        ("gps_time\n1420000000\n", "column 'snr' is missing"),
+        ("gps_time,snr\n", "holds no trigger"),
+        ("gps_time,snr\n1420000000,\n", "line 2: snr is empty"),
+        ("gps_time,snr\n1420000000,-3\n", "must be a positive number"),
+        ("gps_time,snr\nnow,8\n", "is no GPS time"),
+    ],
+)
+def test_bad_triggers_are_one_line(done, tmp_path, capsys, tree_of, text, told):
+    _, out, _ = done
+    path = tmp_path / "bad.csv"
+    path.write_text(text)
+    before = tree_of(out)
+    assert main(["veto", str(out), "--search-triggers", str(path)]) == 2
+    err = capsys.readouterr().err
+    assert err.count("\n") == 1
+    assert told in err
+    assert tree_of(out) == before
 
 
 def test_report_writes_the_page_again(done, capsys):

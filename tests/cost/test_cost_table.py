@@ -7,6 +7,7 @@ import pytest
 import scipy.stats
 
 from dq.cost import cost_of
+from dq.counting import clopper_pearson
 from dq.segments import NS, Segments
 from dq.tables import VETO_COST, VETOES, conform
 
@@ -68,6 +69,16 @@ def test_every_number_equals_the_slow_recount(rng):
             assert row.expected_by_chance == pytest.approx(len(kept) * chance)
             tail = scipy.stats.binom.sf(len(removed) - 1, len(kept), chance)
             assert row.p_value == pytest.approx(tail, rel=1e-6)
+            low, high = clopper_pearson(len(removed), len(kept))
+            ratio = row.efficiency / chance
+            assert row.efficiency_over_dead_time == pytest.approx(ratio)
+            assert row.efficiency_over_dead_time_low == pytest.approx(low / chance)
+            assert row.efficiency_over_dead_time_high == pytest.approx(high / chance)
+            others = table[table.veto != row.veto] if row.veto != "all" else table[:0]
+            beside = outside(zip(others.gps_start, others.gps_end, strict=True))
+            only = length(mine - beside)
+            assert row.unique_dead_time_s == pytest.approx(only, abs=1e-9)
+            assert row.unique_removed == len({t for t in removed if t not in beside})
             if row.veto != "all":
                 assert row.added_dead_time_s == pytest.approx(length(mine - union))
                 assert row.added_removed == len(removed - gone)
@@ -87,6 +98,7 @@ def test_what_was_not_measured_stays_empty(rng):
     table, strain = random_night(rng)
     cost = cost_of(table, strain, analysed=ANALYSED)
     columns = ["held_out_efficiency", "held_out_low", "held_out_high", "signal_loss"]
+    columns += ["volume_time_ratio", "volume_time_unique"]
     assert cost[columns].isna().all().all()
 
 

@@ -6,19 +6,26 @@ import numpy as np
 import pandas as pd
 import pytest
 
-from dq.config import Vetoes
+from dq.config import Vetoes, parse_config
+from dq.errors import ConfigError, InputError
 from dq.segments import NS, Segments
 from dq.tables import VETOES, WITNESSES, conform
 from dq.vetoes import build_vetoes, choose_vetoes, file_safe
+from dq.vetoes.build import family_segments
 
 GPS = 1_420_000_000
 WHOLE = Segments.from_seconds([GPS], [GPS + 1000])
 
 
-def times_table(seconds, snr=9.0):
+def times_table(seconds, snr=9.0, reach=0.0):
     seconds = np.asarray(seconds, float)
     return pd.DataFrame(
-        {"gps_time": GPS + seconds, "snr": np.broadcast_to(snr, seconds.shape)}
+        {
+            "gps_time": GPS + seconds,
+            "gps_start": GPS + seconds - reach,
+            "gps_end": GPS + seconds + reach,
+            "snr": np.broadcast_to(snr, seconds.shape),
+        }
     )
 
 
@@ -51,9 +58,10 @@ def segments(frame, name):
 
 
 def choose(vetoes, seconds, budget):
-    return choose_vetoes(
+    choice = choose_vetoes(
         vetoes, times_table(seconds), analysed=WHOLE, max_dead_time=budget
     )
+    return choice.chosen, choice.refused
 
 
 def test_faults_are_padded_clipped_and_category_one():
@@ -94,6 +102,81 @@ def test_witness_windows_follow_threshold_half_window_and_safety():
     rows = witness_rows(("OV-A", 15.0, 0.25, "cannot tell"))
     out = build_vetoes(rows, auxiliary, {}, analysed=WHOLE, settings=Vetoes())
     assert (out.category == 3).all()
+
+
+def test_windows_are_those_of_the_activity_moved_by_the_delay():
+    """[start - before, end + after) plus strain minus witness, by hand."""
+    rows = witness_rows(("OV-A", 5.5, 0.25, "safe"))
+    rows = rows.assign(before_s=0.1, after_s=0.4, delay_s=0.02)
+    out = build_vetoes(
+        rows,
+        {"OV-A": times_table([10.0], reach=2.0)},
+        {},
+        analysed=WHOLE,
+        settings=Vetoes(),
+    )
+    assert segments(out, "witness-ov-a") == Segments.from_seconds(
+        [f"{GPS + 7}.92"], [f"{GPS + 12}.42"]
+    )
+
+
+def test_one_channel_may_witness_two_families():
+    rows = witness_rows(("OV-A", 5.5, 0.1, "safe"), ("OV-A", 15.0, 0.2, "safe"))
+    rows["target"] = pd.array(["all", "thunder"], dtype="string")
+    auxiliary = {"OV-A": times_table([10, 50], [6, 30])}
+    out = build_vetoes(rows, auxiliary, {}, analysed=WHOLE, settings=Vetoes())
+    assert out.veto.unique().tolist() == ["witness-ov-a", "witness-ov-a-thunder"]
+    assert set(out.family) == {"", "thunder"}
+
+
+def test_whole_seconds_round_outward_within_analysed_time():
+    faults = {"dropout": Segments.from_seconds([GPS + 999.2], [GPS + 999.3])}
+    analysed = Segments.from_seconds([GPS], [GPS + 999.5])
+    settings = Vetoes(whole_seconds=True, fault_padding_s=0.0)
+    out = build_vetoes(
+        witness_rows(("OV-A", 5.5, 0.25, "safe")),
+        {"OV-A": times_table([10.0, 20.9])},
+        faults,
+        analysed=analysed,
+        settings=settings,
+    )
+    assert segments(out, "witness-ov-a") == Segments.from_seconds(
+        [GPS + 9, GPS + 20], [GPS + 11, GPS + 22]
+    )
+    assert segments(out, "fault-dropout") == Segments.from_seconds(
+        [GPS + 999], [GPS + 999.5]
+    )
+
+
+def test_families_are_vetoed_by_name_alone_and_in_category_three():
+    strain = times_table([10, 20, 30], reach=0.5).assign(
+        family=["thunder", "chirp_like", "thunder"]
+    )
+    for names, count in (([], 0), (["thunder"], 2)):
+        settings = Vetoes(strain_families=names, family_padding_s=0.25)
+        out = build_vetoes(
+            witness_rows(), {}, {}, analysed=WHOLE, settings=settings, strain=strain
+        )
+        assert len(out) == count
+    assert segments(out, "family-thunder") == Segments.from_seconds(
+        [GPS + 9.25, GPS + 29.25], [GPS + 10.75, GPS + 30.75]
+    )
+    assert (out.category == 3).all()
+    assert (out.source == "family").all()
+
+
+@pytest.mark.parametrize("name", ["chirp_like", "unknown", "unsorted"])
+def test_a_family_that_may_hold_signals_is_refused_in_one_line(name):
+    raw = {
+        "site": {"name": "x", "strain": "OV-STRAIN"},
+        "data": {"files": ["a.h5"], "channels": "c.csv"},
+        "vetoes": {"strain_families": ["thunder", name]},
+    }
+    with pytest.raises(ConfigError, match=f"family '{name}' is never vetoed") as told:
+        parse_config(raw)
+    assert "\n" not in str(told.value)
+    with pytest.raises(InputError, match="never vetoed"):
+        family_segments(None, name, padding_s=0.1)
 
 
 def test_names_are_safe_for_files_and_unique():

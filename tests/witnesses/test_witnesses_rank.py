@@ -62,7 +62,8 @@ def test_significance_and_expectation_are_the_formulas(rng):
     strain, other = table(uniform(rng, 50)), table(uniform(rng, 80))
     settings = Witnesses(snr_thresholds=[5.5], half_windows_s=[0.5])
     row = find(strain, {"OV-A": other}, settings=settings).iloc[0]
-    windows = veto_windows(other, snr_threshold=5.5, half_window_s=0.5) & WHOLE
+    points = other.assign(gps_start=other.gps_time, gps_end=other.gps_time)
+    windows = veto_windows(points, snr_threshold=5.5, before_s=0.5, after_s=0.5) & WHOLE
     inside = windows.contains(np.round(strain.gps_time.to_numpy() * 1e9).astype(int))
     assert row.coincidences == inside.sum()
     assert row.dead_time_s == pytest.approx(windows.total_s)

@@ -6,6 +6,7 @@ import os
 import h5py
 import numpy as np
 import pandas as pd
+import portion
 import pytest
 
 from dq.errors import InputError, OutputError
@@ -137,6 +138,53 @@ def test_mask_bits_second_by_second(tmp_path):
     assert seconds("w") == seconds("CATEGORY_3") == [2, 3]
     assert seconds("f") == seconds("CATEGORY_1") == [5]
     assert seconds("CATEGORY_2") == []
+
+
+@pytest.mark.reference
+def test_mask_equals_a_recount_with_portion(tmp_path, rng):
+    """Each second of a random night against the portion library's intervals."""
+    seconds = 60
+
+    def intervals(pairs):
+        out = portion.empty()
+        for low, high in pairs:
+            out |= portion.closedopen(low, high)
+        return out
+
+    for night in range(5):
+        rows = []
+        for k in range(35):
+            for start in rng.uniform(-2, seconds, 3):
+                low = GPS * NS + round(start * NS)
+                # some borders fall on whole seconds, where mistakes hide
+                low = low if rng.uniform() < 0.5 else low // NS * NS
+                high = low + int(rng.choice([1, NS // 3, NS, 2 * NS]))
+                rows.append((low, high, f"v{k}", k % 3 + 1, "witness", "", ""))
+        names = [c.name for c in VETOES]
+        table = conform(pd.DataFrame(rows, columns=names), VETOES)
+        edges = np.sort(rng.uniform(0, seconds, 6)).reshape(3, 2)
+        analysed = Segments(*(np.rint(edges * NS).astype(int) + GPS * NS).T)
+        path = tmp_path / f"{night}.h5"
+        span = {"start_ns": GPS * NS, "end_ns": (GPS + seconds) * NS}
+        write_quality_mask(path, **span, analysed=analysed, vetoes=table)
+        with h5py.File(path) as file:
+            mask = file["mask"][:]
+            bits = [n.decode() for n in file["bit_names"][:]]
+        judged = intervals(analysed)
+        for bit, name in enumerate(bits):
+            got = mask[:, bit // 32] >> (bit % 32) & 1
+            if name.startswith("CATEGORY"):
+                rows = table[table.category == int(name[-1])]
+            else:
+                rows = table[table.veto == name]
+            mine = intervals(zip(rows.gps_start, rows.gps_end, strict=True))
+            for second in range(seconds):
+                low = (GPS + second) * NS
+                whole = portion.closedopen(low, low + NS)
+                if name == "ANALYSED":
+                    assert got[second] == (whole in judged)
+                else:
+                    assert got[second] == (not (whole & mine).empty)
 
 
 def test_more_vetoes_than_bits_go_into_further_words(tmp_path):
