@@ -7,6 +7,7 @@ store         HDF5 channels, the channel list, ready segments
 conditioning  noise spectrum, whitening, data faults
 tiles         multi-Q tile plan and normalised tile energies
 transients    loud tiles gathered into transients
+families      a sorter that learns noise families from hand labels
 witnesses     which auxiliary channels saw the strain's transients, beyond chance
 vetoes        faults and witnesses turned into segments under a dead-time budget
 cost          what a set of veto segments removes, and for how much time
@@ -36,6 +37,8 @@ _FACES = {
     "open_store": "dq.store",
     "read_channel_list": "dq.store",
     "analyse_channel": "dq.night.channel",
+    "FamilySorter": "dq.families",
+    "load_model": "dq.families",
     "find_witnesses": "dq.witnesses",
     "build_vetoes": "dq.vetoes",
     "choose_vetoes": "dq.vetoes",

@@ -1,0 +1,142 @@
+"""Trials that grow forests anew: would more labels help, and what is recognised as new?
+
+Both leave whole blocks of time out, like everything in the report.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+import pandas as pd
+
+from dq.counting import clopper_pearson
+from dq.families.groups import group_folds
+from dq.families.sorter import FamilySorter, _bar
+
+#: Shares of the training blocks at which the learning curve is measured.
+SHARES = (0.125, 0.25, 0.5, 0.75, 1.0)
+
+#: Folds of these trials: fewer than in training, since each grows many forests.
+_FOLDS = 3
+
+
+def _folds(truth, group, rng) -> np.ndarray:
+    blocks = len(np.unique(group))
+    return group_folds(truth, group, folds=min(_FOLDS, blocks), rng=rng)
+
+
+def learning_curve(
+    sorter: FamilySorter, X: np.ndarray, *, rng: np.random.Generator, shares=SHARES
+) -> pd.DataFrame:
+    """Measure F1 against the number of labels, by blocks of time.
+
+    Parameters
+    ----------
+    sorter : FamilySorter
+        Fitted; its settings and split are used.
+    X : ndarray, shape (n, features)
+        The training table.
+    rng : numpy.random.Generator
+    shares : sequence of float
+
+    Returns
+    -------
+    pandas.DataFrame
+        ``share, examples`` (mean number trained on), ``family`` (or ``macro``),
+        ``labels`` (mean number of that family trained on), ``f1``.
+    """
+    held = sorter.out_of_fold_
+    X = np.asarray(X, float)[held.rows]
+    fold = _folds(held.truth, held.group, rng)
+    blocks = np.unique(held.group)
+    order = rng.permutation(len(blocks))
+    rank = np.empty(len(blocks))
+    rank[order] = (np.arange(len(blocks)) + 1) / len(blocks)
+    ranked = rank[np.searchsorted(blocks, held.group)]
+    rows = []
+    for share in shares:
+        said = np.full(len(X), -1)
+        used = np.zeros(len(sorter.classes_))
+        for f in np.unique(fold):
+            # the same order of blocks at every share: a larger set holds the smaller
+            train = (fold != f) & (ranked <= share)
+            used += np.bincount(held.truth[train], minlength=len(used))
+            if len(np.unique(held.truth[train])) < 2:
+                continue
+            weight = np.ones(int(train.sum()))
+            forest, _ = sorter._grow(X[train], held.truth[train], weight)
+            said[fold == f] = forest.vote(X[fold == f]).argmax(axis=1)
+        folds = len(np.unique(fold))
+        scores = [_f1(held.truth == k, said == k) for k in range(len(used))]
+        whole = {"share": share, "examples": used.sum() / folds}
+        rows.append(
+            {**whole, "family": "macro", "labels": np.nan, "f1": np.mean(scores)}
+        )
+        for k, family in enumerate(sorter.classes_):
+            labels = used[k] / folds
+            rows.append(
+                {**whole, "family": str(family), "labels": labels, "f1": scores[k]}
+            )
+    return pd.DataFrame(rows)
+
+
+def _f1(own: np.ndarray, called: np.ndarray) -> float:
+    total = own.sum() + called.sum()
+    return float(2 * (own & called).sum() / total) if total else 0.0
+
+
+def new_families(
+    sorter: FamilySorter, X: np.ndarray, *, rng: np.random.Generator
+) -> pd.DataFrame:
+    """Leave each family out of training: is it then declined?
+
+    Parameters
+    ----------
+    sorter, X, rng
+        As for :func:`learning_curve`.
+
+    Returns
+    -------
+    pandas.DataFrame
+        ``family, examples, declined, share, low, high``: how many of the family's
+        examples a sorter that never saw it calls unknown, and ``known_declined``: the
+        share of all others that it turns away, out of fold.
+    """
+    held = sorter.out_of_fold_
+    X = np.asarray(X, float)[held.rows]
+    fold = _folds(held.truth, held.group, rng)
+    rows = []
+    for k, family in enumerate(sorter.classes_):
+        known = held.truth != k
+        if len(np.unique(held.truth[known])) < 2:
+            continue
+        raw = np.zeros(len(X))
+        for f in np.unique(fold):
+            asked = known & (fold == f)
+            raw[asked] = _score(sorter, X, held.truth, known & (fold != f), asked)
+        bar = _bar(raw[known], sorter.reject)
+        strange = _score(sorter, X, held.truth, known, ~known)
+        count, declined = len(strange), int((strange > bar).sum())
+        low, high = clopper_pearson(declined, count)
+        rows.append(
+            {
+                "family": str(family),
+                "examples": count,
+                "declined": declined,
+                "share": declined / count,
+                "low": low,
+                "high": high,
+                "known_declined": float((raw[known] > bar).mean()),
+            }
+        )
+    return pd.DataFrame(rows)
+
+
+def _score(sorter, X, truth, train, asked) -> np.ndarray:
+    """Give the raw novelty of some rows after training on others."""
+    classes, column = np.unique(truth[train], return_inverse=True)
+    forest, _ = sorter._grow(
+        X[train], column, np.ones(int(train.sum())), families=len(classes)
+    )
+    novelty = sorter._strange(X[train], column, families=len(classes))
+    x = X[asked]
+    return novelty.score(x, forest.vote(x))

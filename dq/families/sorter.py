@@ -1,0 +1,402 @@
+"""The sorter of transients into families: a scikit-learn estimator.
+
+A random forest (Breiman 2001, Mach. Learn. 45 5) votes; its votes become calibrated
+probabilities; sets of families keep a promised coverage; a novelty score lets it
+decline. Everything that needs examples which the forest has not seen (calibration, bars
+of sets and novelty) uses votes of forests grown without the example's whole block of
+time.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import pandas as pd
+from sklearn.base import BaseEstimator, ClassifierMixin
+from sklearn.ensemble import RandomForestClassifier
+from sklearn.utils import check_random_state
+from sklearn.utils.multiclass import check_classification_targets
+from sklearn.utils.validation import (
+    _check_sample_weight,
+    check_is_fitted,
+    validate_data,
+)
+
+from dq.errors import TrainingError
+from dq.families.calibration import (
+    METHODS,
+    VoteMap,
+    choose_map,
+    fit_map,
+    mapped_out_of_fold,
+)
+from dq.families.conformal import conformal_bar, family_bars, sets_below
+from dq.families.forest import Forest, pack
+from dq.families.groups import group_folds
+from dq.families.guard import UNKNOWN
+from dq.families.labels import SEPARATOR, check_family
+from dq.families.novelty import NoveltyModel, fit_novelty
+from dq.families.space import fit_space
+
+#: How much of one tree's vote the novelty may move a set's score: it orders examples
+#: whose votes tie and changes nothing else.
+_TIE_VOTES = 1.0
+
+
+@dataclass(frozen=True)
+class OutOfFold:
+    """What was said of each example by models that had not seen its block of time.
+
+    Attributes
+    ----------
+    rows : ndarray of int, shape (n,)
+        The examples' rows in the training table (replanted copies are left out).
+    truth : ndarray of int, shape (n,)
+        Column of the labelled family in ``classes_``.
+    fold, group : ndarray, shape (n,)
+    votes, probability : ndarray, shape (n, families)
+    sets : ndarray of bool, shape (n, families)
+    novelty : ndarray, shape (n,)
+    """
+
+    rows: np.ndarray
+    truth: np.ndarray
+    fold: np.ndarray
+    group: np.ndarray
+    votes: np.ndarray
+    probability: np.ndarray
+    sets: np.ndarray
+    novelty: np.ndarray
+
+
+class FamilySorter(ClassifierMixin, BaseEstimator):
+    """Sort transients into noise families, or decline.
+
+    Parameters
+    ----------
+    n_trees : int
+        Trees of each forest. 200 give votes in steps of 0.005.
+    min_leaf : int
+        Smallest number of examples in a leaf.
+    n_folds : int
+        Splits by time block for everything that is measured out of fold.
+    alpha : float
+        Fraction of a family's members that its sets may miss.
+    reject : float
+        Fraction of known examples that the novelty score may turn away.
+    calibration : str
+        ``auto`` keeps the map with the smallest held-out Brier score; or one of
+        ``none``, ``temperature``, ``platt``, ``beta``, ``isotonic``.
+    random_state : int
+        Seed; equal tables and seed give an equal sorter.
+
+    Attributes
+    ----------
+    classes_ : ndarray, shape (families,)
+    forest_ : Forest
+    map_ : VoteMap
+    bars_ : ndarray, shape (families,)
+        Largest strangeness that a set admits.
+    novelty_ : NoveltyModel
+    novelty_bar_ : float
+        Raw novelty at which 1 lies.
+    space_ : dq.families.space.Space
+        Scale of every feature.
+    known_, known_family_ : ndarray, shape (examples, features) and (examples,)
+        The examples, against which drift is measured and unknowns are grouped.
+    importance_ : ndarray, shape (features,)
+        Mean decrease of impurity.
+    calibration_scores_ : dict of str to float
+        Held-out Brier score of each map tried.
+    out_of_fold_ : OutOfFold or None
+        None in a sorter read from a file.
+
+    Examples
+    --------
+    >>> rng = np.random.default_rng(1)
+    >>> x = np.r_[rng.normal(0, 1, (40, 3)), rng.normal(6, 1, (40, 3))]
+    >>> y = np.repeat(["knock", "whistle"], 40)
+    >>> sorter = FamilySorter(n_trees=20).fit(x, y, groups=np.arange(80) // 4)
+    >>> sorter.decide([[0.0, 0.0, 0.0]]).family.tolist()
+    ['knock']
+    """
+
+    def __init__(
+        self,
+        n_trees=200,
+        *,
+        min_leaf=1,
+        n_folds=5,
+        alpha=0.1,
+        reject=0.02,
+        calibration="auto",
+        random_state=0,
+    ):
+        self.n_trees = n_trees
+        self.min_leaf = min_leaf
+        self.n_folds = n_folds
+        self.alpha = alpha
+        self.reject = reject
+        self.calibration = calibration
+        self.random_state = random_state
+
+    def __sklearn_tags__(self):
+        """Say that missing values are welcome."""
+        tags = super().__sklearn_tags__()
+        tags.input_tags.allow_nan = True
+        return tags
+
+    def fit(self, X, y, groups=None, sample_weight=None, parent=None):
+        """Train.
+
+        Parameters
+        ----------
+        X : array_like or DataFrame, shape (n, features)
+            NaN where a feature is missing.
+        y : array_like, shape (n,)
+            Families.
+        groups : array_like, shape (n,), optional
+            Block of time of each example; a block never stands on both sides of a
+            split. Without it every example is a block of its own.
+        sample_weight : array_like, shape (n,), optional
+        parent : array_like of int, shape (n,), optional
+            Row of the example that a replanted copy was made from, -1 for an example
+            itself. Copies are trained on only where their parent is, and never scored.
+
+        Returns
+        -------
+        FamilySorter
+            Itself.
+
+        Raises
+        ------
+        TrainingError
+            Fewer than two families or blocks of time, a reserved family name, or a
+            setting out of its bounds.
+        """
+        self._check_settings()
+        X, y = validate_data(
+            self, X, y, dtype=np.float64, ensure_all_finite="allow-nan"
+        )
+        check_classification_targets(y)
+        weight = _check_sample_weight(sample_weight, X)
+        self.classes_, truth = np.unique(y, return_inverse=True)
+        _check_families(self.classes_)
+        root = _roots(parent, len(X))
+        own = root == np.arange(len(X))
+        groups = np.arange(len(X)) if groups is None else np.asarray(groups)
+        if len(groups) != len(X):
+            raise TrainingError(f"{len(groups)} groups for {len(X)} examples")
+        group = np.unique(groups, return_inverse=True)[1][root]
+        self._fit_out_of_fold(X, truth, weight, root, own, group)
+        self.forest_, self.importance_ = self._grow(X, truth, weight)
+        self.novelty_ = self._strange(X[own], truth[own])
+        self.space_ = fit_space(X[own])
+        self.known_ = X[own].astype(np.float32)
+        self.known_family_ = truth[own].astype(np.int32)
+        return self
+
+    def _fit_out_of_fold(self, X, truth, weight, root, own, group):
+        """Score every example by models without its block; set maps and bars."""
+        rows = np.flatnonzero(own)
+        blocks = len(np.unique(group[rows]))
+        if blocks < 2:
+            raise TrainingError(
+                f"the examples lie in {blocks} block of time; at least 2 are needed "
+                "to measure anything on time not trained on"
+            )
+        fold = group_folds(
+            truth[rows],
+            group[rows],
+            folds=min(self.n_folds, blocks),
+            rng=np.random.default_rng(self._seed(0)),
+        )
+        of_row = np.empty(len(X), dtype=np.int64)
+        of_row[rows] = fold
+        of_row = of_row[root]
+        votes = np.zeros((len(rows), len(self.classes_)))
+        raw = np.zeros(len(rows))
+        for f in np.unique(fold):
+            inside, train = fold == f, of_row != f
+            forest, _ = self._grow(X[train], truth[train], weight[train])
+            novelty = self._strange(X[train & own], truth[train & own])
+            x = X[rows[inside]]
+            votes[inside] = forest.vote(x)
+            raw[inside] = novelty.score(x, votes[inside])
+        self._set_bars(rows, truth[rows], fold, group[rows], votes, raw, weight[rows])
+
+    def _set_bars(self, rows, truth, fold, group, votes, raw, weight):
+        method = self.calibration
+        self.calibration_scores_ = {}
+        if method == "auto":
+            method, self.calibration_scores_ = choose_map(votes, truth, fold, weight)
+        self.map_ = fit_map(method, votes, truth, weight)
+        strange = self._strangeness(votes, raw)
+        self.bars_ = family_bars(strange, truth, self.alpha)
+        self.novelty_bar_ = _bar(raw, self.reject)
+        sets = np.zeros(votes.shape, dtype=bool)
+        novelty = np.empty(len(raw))
+        for f in np.unique(fold):
+            # each fold is judged by bars that the other folds set
+            inside, rest = fold == f, fold != f
+            bars = family_bars(strange[rest], truth[rest], self.alpha)
+            sets[inside] = sets_below(strange[inside], bars)
+            novelty[inside] = raw[inside] / _bar(raw[rest], self.reject)
+        self.out_of_fold_ = OutOfFold(
+            rows=rows,
+            truth=truth,
+            fold=fold,
+            group=group,
+            votes=votes,
+            probability=mapped_out_of_fold(method, votes, truth, fold, weight),
+            sets=sets,
+            novelty=novelty,
+        )
+
+    def _strange(self, X, truth, families=None) -> NoveltyModel:
+        families = len(self.classes_) if families is None else families
+        return fit_novelty(X, truth, families=families, seed=self._seed(1))
+
+    def _grow(self, X, truth, weight, families=None) -> tuple[Forest, np.ndarray]:
+        grown = RandomForestClassifier(
+            n_estimators=self.n_trees,
+            min_samples_leaf=self.min_leaf,
+            class_weight="balanced",
+            random_state=self._seed(2),
+            n_jobs=1,
+        ).fit(X, truth, sample_weight=weight)
+        families = len(self.classes_) if families is None else families
+        forest = pack(grown.estimators_, grown.classes_, families)
+        return forest, grown.feature_importances_
+
+    def _strangeness(self, votes, raw) -> np.ndarray:
+        """Give how strange each family would be: few votes, then far from all known."""
+        tie = _TIE_VOTES / self.n_trees * raw / (1.0 + raw)
+        return 1.0 - votes + tie[:, None]
+
+    def _seed(self, purpose: int) -> int:
+        state = self.random_state
+        if isinstance(state, int | np.integer):
+            return int(
+                np.random.SeedSequence([int(state), purpose]).generate_state(1)[0]
+            )
+        return int(check_random_state(state).randint(2**31 - 1))
+
+    def _check_settings(self):
+        bounds = {"alpha": (0.0, 0.5), "reject": (0.0, 0.5)}
+        for name, (low, high) in bounds.items():
+            value = getattr(self, name)
+            if not low < value <= high:
+                raise TrainingError(
+                    f"{name}={value} must lie above {low} and to {high}"
+                )
+        for name, low in {"n_trees": 1, "min_leaf": 1, "n_folds": 2}.items():
+            if getattr(self, name) < low:
+                raise TrainingError(f"{name}={getattr(self, name)} must be >= {low}")
+        if self.calibration not in ("auto", *METHODS):
+            raise TrainingError(
+                f"calibration={self.calibration!r} must be auto or one of "
+                f"{', '.join(METHODS)}"
+            )
+
+    def _votes(self, X) -> tuple[np.ndarray, np.ndarray]:
+        check_is_fitted(self, "forest_")
+        X = validate_data(
+            self, X, reset=False, dtype=np.float64, ensure_all_finite="allow-nan"
+        )
+        return X, self.forest_.vote(X)
+
+    def predict_proba(self, X) -> np.ndarray:
+        """Give calibrated probabilities, shape (n, families)."""
+        return self.map_(self._votes(X)[1])
+
+    def predict(self, X) -> np.ndarray:
+        """Give the most probable family of each row; never ``unknown``."""
+        return self.classes_[self.predict_proba(X).argmax(axis=1)]
+
+    def novelty(self, X) -> np.ndarray:
+        """Give each row's novelty, 0 upward; beyond 1 the sorter declines."""
+        X, votes = self._votes(X)
+        return self.novelty_.score(X, votes) / self.novelty_bar_
+
+    def predict_set(self, X) -> np.ndarray:
+        """Give the families that cannot be excluded: bool, shape (n, families).
+
+        A set may be empty: about ``alpha`` of the known examples are stranger than the
+        bar of every family.
+        """
+        X, votes = self._votes(X)
+        return sets_below(
+            self._strangeness(votes, self.novelty_.score(X, votes)), self.bars_
+        )
+
+    def decide(self, X) -> pd.DataFrame:
+        """Sort rows into families.
+
+        Returns
+        -------
+        pandas.DataFrame
+            Index as ``X``; ``family`` (``unknown`` where novelty exceeds 1),
+            ``probability`` (of that family; missing for ``unknown``), ``family_set``
+            (joined by ``;``, most voted first) and ``novelty``.
+        """
+        index = X.index if isinstance(X, pd.DataFrame) else None
+        X, votes = self._votes(X)
+        probability = self.map_(votes)
+        raw = self.novelty_.score(X, votes)
+        best = probability.argmax(axis=1)
+        novelty = raw / self.novelty_bar_
+        known = novelty <= 1.0
+        family = np.where(known, self.classes_[best].astype(object), UNKNOWN)
+        stated = np.where(known, probability[np.arange(len(best)), best], np.nan)
+        sets = sets_below(self._strangeness(votes, raw), self.bars_)
+        return pd.DataFrame(
+            {
+                "family": family,
+                "probability": stated,
+                "family_set": self._set_texts(sets, votes),
+                "novelty": novelty,
+            },
+            index=index,
+        )
+
+    def _set_texts(self, sets: np.ndarray, votes: np.ndarray) -> list[str]:
+        names = self.classes_.astype(str)
+        order = np.argsort(-votes, axis=1, kind="stable")
+        single = sets.sum(axis=1) == 1
+        texts = np.where(single, names[sets.argmax(axis=1)], "").astype(object)
+        for i in np.flatnonzero(sets.sum(axis=1) > 1):
+            texts[i] = SEPARATOR.join(names[k] for k in order[i] if sets[i, k])
+        return texts.tolist()
+
+
+def _bar(raw: np.ndarray, reject: float) -> float:
+    """Give the raw novelty that ``reject`` of known examples exceed; few set the top."""
+    bar = conformal_bar(raw, reject)
+    return max(bar if np.isfinite(bar) else float(raw.max(initial=0.0)), 1e-9)
+
+
+def _check_families(families: np.ndarray) -> None:
+    if len(families) < 2:
+        raise TrainingError(
+            f"the labels name {len(families)} family (class); at least 2 are needed"
+        )
+    if families.dtype.kind in "UO":
+        for name in families:
+            check_family(str(name))
+
+
+def _roots(parent, count: int) -> np.ndarray:
+    """Give for each row the example that it stands for: its parent or itself."""
+    rows = np.arange(count)
+    if parent is None:
+        return rows
+    parent = np.asarray(parent, dtype=np.int64)
+    if len(parent) != count:
+        raise TrainingError(f"{len(parent)} parents for {count} examples")
+    if np.any(parent >= count) or np.any(parent < -1):
+        raise TrainingError("a parent is no row of the table")
+    if np.any(parent[parent[parent >= 0]] >= 0):
+        raise TrainingError("a parent is itself a replanted copy; give its example")
+    return np.where(parent >= 0, parent, rows)
