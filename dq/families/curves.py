@@ -1,4 +1,4 @@
-"""Trials that grow forests anew: would more labels help, and what is recognised as new?
+"""Trials that grow forests anew: the learning curve, and families left out.
 
 Both leave whole blocks of time out, like everything in the report.
 """
@@ -10,6 +10,7 @@ import pandas as pd
 
 from dq.counting import clopper_pearson
 from dq.families.groups import group_folds
+from dq.families.novelty import fit_tails
 from dq.families.sorter import FamilySorter, _bar
 
 #: Shares of the training blocks at which the learning curve is measured.
@@ -87,7 +88,7 @@ def _f1(own: np.ndarray, called: np.ndarray) -> float:
 def new_families(
     sorter: FamilySorter, X: np.ndarray, *, rng: np.random.Generator
 ) -> pd.DataFrame:
-    """Leave each family out of training: is it then declined?
+    """Leave each family out of training and count how often it is then declined.
 
     Parameters
     ----------
@@ -109,12 +110,16 @@ def new_families(
         known = held.truth != k
         if len(np.unique(held.truth[known])) < 2:
             continue
-        raw = np.zeros(len(X))
+        signs = np.zeros((len(X), 3))
+        chosen = np.zeros(len(X), dtype=np.int64)
         for f in np.unique(fold):
             asked = known & (fold == f)
-            raw[asked] = _score(sorter, X, held.truth, known & (fold != f), asked)
-        bar = _bar(raw[known], sorter.reject)
-        strange = _score(sorter, X, held.truth, known, ~known)
+            train = known & (fold != f)
+            signs[asked], chosen[asked] = _signs(sorter, X, held.truth, train, asked)
+        tails = fit_tails(signs[known], chosen[known], len(sorter.classes_))
+        usual = tails.combine(signs[known], chosen[known])
+        bar = _bar(usual, sorter.reject)
+        strange = tails.combine(*_signs(sorter, X, held.truth, known, ~known))
         count, declined = len(strange), int((strange > bar).sum())
         low, high = clopper_pearson(declined, count)
         rows.append(
@@ -125,18 +130,16 @@ def new_families(
                 "share": declined / count,
                 "low": low,
                 "high": high,
-                "known_declined": float((raw[known] > bar).mean()),
+                "known_declined": float((usual > bar).mean()),
             }
         )
     return pd.DataFrame(rows)
 
 
-def _score(sorter, X, truth, train, asked) -> np.ndarray:
-    """Give the raw novelty of some rows after training on others."""
-    classes, column = np.unique(truth[train], return_inverse=True)
-    forest, _ = sorter._grow(
-        X[train], column, np.ones(int(train.sum())), families=len(classes)
-    )
-    novelty = sorter._strange(X[train], column, families=len(classes))
+def _signs(sorter, X, truth, train, asked) -> tuple[np.ndarray, np.ndarray]:
+    """Give signs of novelty and the chosen family of some rows, trained on others."""
+    forest, _ = sorter._grow(X[train], truth[train], np.ones(int(train.sum())))
     x = X[asked]
-    return novelty.score(x, forest.vote(x))
+    votes = forest.vote(x)
+    learnt = sorter._learn_signs(X[train], truth[train])
+    return learnt.measure(x, votes), votes.argmax(axis=1)

@@ -1,4 +1,4 @@
-"""Has the noise moved away from what the sorter was trained on?"""
+"""Whether the noise moved away from what the sorter was trained on."""
 
 from __future__ import annotations
 
@@ -46,12 +46,12 @@ def drift(features: pd.DataFrame, sorter: FamilySorter) -> pd.DataFrame:
     pandas.DataFrame
         One row per feature, the most moved first: ``feature, distance`` (largest
         difference of the distributions, 0..1), ``shift`` (of the median, in training
-        spreads), ``p_value, q_value, moved``. A night without transients that the sorter
-        knows gives an empty table.
+        spreads), ``p_value, q_value, moved``. A night without transients that the
+        sorter knows gives an empty table.
 
     Notes
     -----
-    Kolmogorov-Smirnov distance between the transients that the sorter knows and the
+    Kolmogorov-Smirnov distance between transients that the sorter knows and the
     training examples weighted to the same mix of families; its chance from the
     asymptotic law with the effective number of weighted examples (from memory:
     Monahan 2011, Numerical Methods of Statistics). Transients of one epoch are alike

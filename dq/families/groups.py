@@ -10,7 +10,7 @@ BLOCK_S = 64.0
 
 
 def time_groups(times_s: np.ndarray, block_s: float = BLOCK_S) -> np.ndarray:
-    """Number the blocks of time that examples lie in.
+    """Count off the blocks of time that examples lie in.
 
     Parameters
     ----------

@@ -175,7 +175,7 @@ def labeller_agreement(votes: pd.DataFrame) -> pd.DataFrame:
     pandas.DataFrame
         ``first, second, both, agreed, kappa``; only pairs with common transients.
     """
-    wide = votes.pivot(index="transient", columns="labeller", values="family")
+    wide = votes.set_index(["transient", "labeller"])["family"].unstack()  # noqa: PD010
     names = list(wide.columns)
     rows = []
     for i, first in enumerate(names):

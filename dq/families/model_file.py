@@ -18,9 +18,10 @@ import numpy as np
 
 from dq.errors import ModelError
 from dq.families.calibration import METHODS, VoteMap
+from dq.families.clouds import Clouds
 from dq.families.forest import Forest
 from dq.families.labels import check_family
-from dq.families.novelty import NoveltyModel
+from dq.families.novelty import Signs, Tails
 from dq.families.sorter import FamilySorter
 from dq.families.space import Space
 
@@ -88,6 +89,12 @@ def model_bytes(sorter: FamilySorter, meta: dict[str, Any]) -> bytes:
         "map": sorter.map_.parameters,
         "bars": sorter.bars_,
         "importance": sorter.importance_,
+        "ranks": sorter.signs_.clouds.table,
+        "cloud_centre": sorter.signs_.clouds.centre,
+        "cloud_whiten": sorter.signs_.clouds.whiten,
+        "tail_middle": sorter.tails_.middle,
+        "tail_spread": sorter.tails_.spread,
+        "tail_known": sorter.tails_.known,
         "space_centre": sorter.space_.centre,
         "space_spread": sorter.space_.spread,
         "known": sorter.known_,
@@ -95,7 +102,7 @@ def model_bytes(sorter: FamilySorter, meta: dict[str, Any]) -> bytes:
     }
     for prefix, forest in (
         ("forest", sorter.forest_),
-        ("strange", sorter.novelty_.forest),
+        ("strange", sorter.signs_.forest),
     ):
         for name, kind in _FOREST_KINDS.items():
             arrays[f"{prefix}_{name}"] = getattr(forest, name).astype(kind, copy=False)
@@ -265,8 +272,7 @@ def _sorter(head: dict, arrays: _Arrays, where: str) -> FamilySorter:
     sorter.feature_names_in_ = np.array(head["features"], dtype=object)
     sorter.n_features_in_ = features
     sorter.forest_ = arrays.forest("forest", features, families)
-    strange = arrays.forest("strange", features, families + 1)
-    sorter.novelty_ = NoveltyModel(strange)
+    sorter.signs_, sorter.tails_ = _novelty(arrays, features, families)
     sorter.novelty_bar_ = float(head["novelty_bar"])
     sorter.map_ = _map(head["calibration"], arrays, families)
     sorter.calibration_scores_ = dict(head["calibration_scores"])
@@ -283,6 +289,22 @@ def _sorter(head: dict, arrays: _Arrays, where: str) -> FamilySorter:
         raise ModelError(f"model {where} is damaged: an example of no family")
     sorter.out_of_fold_ = None
     return sorter
+
+
+def _novelty(arrays: _Arrays, features: int, families: int) -> tuple[Signs, Tails]:
+    clouds = Clouds(
+        arrays.get("ranks", "f8", (features, None)),
+        arrays.get("cloud_centre", "f8", (families, features)),
+        arrays.get("cloud_whiten", "f8", (families, features, features)),
+    )
+    tails = Tails(
+        arrays.get("tail_middle", "f8", (families,)),
+        arrays.get("tail_spread", "f8", (families,)),
+        arrays.get("tail_known", "f8", (3, None)),
+    )
+    if not tails.known.shape[1] or clouds.table.shape[1] < 2:
+        raise ModelError(f"model {arrays.where} is damaged: no known examples")
+    return Signs(clouds, arrays.forest("strange", features, families + 1)), tails
 
 
 def _map(method: str, arrays: _Arrays, families: int) -> VoteMap:

@@ -32,8 +32,8 @@ class Proposals:
     group : ndarray of int, shape (n,)
         Number of each transient's group, 1 the largest; 0 for those that stand alone.
     table : pandas.DataFrame
-        ``group, count, per_hour, typical`` (row of the most central member), ``nearest``
-        (the known family that votes go to most), largest first.
+        ``group, count, per_hour, typical`` (row of the most central member),
+        ``nearest`` (the known family that most votes go to), largest first.
     text : str
         For instance ``27 unknowns, 19 of one kind``.
     """

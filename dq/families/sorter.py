@@ -26,7 +26,6 @@ from sklearn.utils.validation import (
 from dq.errors import TrainingError
 from dq.families.calibration import (
     METHODS,
-    VoteMap,
     choose_map,
     fit_map,
     mapped_out_of_fold,
@@ -36,8 +35,12 @@ from dq.families.forest import Forest, pack
 from dq.families.groups import group_folds
 from dq.families.guard import UNKNOWN
 from dq.families.labels import SEPARATOR, check_family
-from dq.families.novelty import NoveltyModel, fit_novelty
+from dq.families.novelty import Signs, fit_signs, fit_tails
 from dq.families.space import fit_space
+
+#: Examples that one tree is grown from at most: bounds the time of a large training
+#: set; trees of 2500 examples voted as well as trees of 5000.
+_TREE_EXAMPLES = 2500
 
 #: How much of one tree's vote the novelty may move a set's score: it orders examples
 #: whose votes tie and changes nothing else.
@@ -95,10 +98,11 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
     ----------
     classes_ : ndarray, shape (families,)
     forest_ : Forest
-    map_ : VoteMap
+    map_ : dq.families.calibration.VoteMap
     bars_ : ndarray, shape (families,)
         Largest strangeness that a set admits.
-    novelty_ : NoveltyModel
+    signs_ : dq.families.novelty.Signs
+    tails_ : dq.families.novelty.Tails
     novelty_bar_ : float
         Raw novelty at which 1 lies.
     space_ : dq.families.space.Space
@@ -129,7 +133,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         min_leaf=1,
         n_folds=5,
         alpha=0.1,
-        reject=0.02,
+        reject=0.025,
         calibration="auto",
         random_state=0,
     ):
@@ -191,7 +195,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         group = np.unique(groups, return_inverse=True)[1][root]
         self._fit_out_of_fold(X, truth, weight, root, own, group)
         self.forest_, self.importance_ = self._grow(X, truth, weight)
-        self.novelty_ = self._strange(X[own], truth[own])
+        self.signs_ = self._learn_signs(X[own], truth[own])
         self.space_ = fit_space(X[own])
         self.known_ = X[own].astype(np.float32)
         self.known_family_ = truth[own].astype(np.int32)
@@ -216,14 +220,17 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         of_row[rows] = fold
         of_row = of_row[root]
         votes = np.zeros((len(rows), len(self.classes_)))
-        raw = np.zeros(len(rows))
+        signs = np.zeros((len(rows), 3))
         for f in np.unique(fold):
             inside, train = fold == f, of_row != f
             forest, _ = self._grow(X[train], truth[train], weight[train])
-            novelty = self._strange(X[train & own], truth[train & own])
+            learnt = self._learn_signs(X[train & own], truth[train & own])
             x = X[rows[inside]]
             votes[inside] = forest.vote(x)
-            raw[inside] = novelty.score(x, votes[inside])
+            signs[inside] = learnt.measure(x, votes[inside])
+        chosen = votes.argmax(axis=1)
+        self.tails_ = fit_tails(signs, chosen, len(self.classes_))
+        raw = self.tails_.combine(signs, chosen)
         self._set_bars(rows, truth[rows], fold, group[rows], votes, raw, weight[rows])
 
     def _set_bars(self, rows, truth, fold, group, votes, raw, weight):
@@ -254,20 +261,25 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             novelty=novelty,
         )
 
-    def _strange(self, X, truth, families=None) -> NoveltyModel:
-        families = len(self.classes_) if families is None else families
-        return fit_novelty(X, truth, families=families, seed=self._seed(1))
+    def _learn_signs(self, X, truth) -> Signs:
+        return fit_signs(
+            X,
+            truth,
+            families=len(self.classes_),
+            trees=max(self.n_trees // 3, 1),
+            seed=self._seed(1),
+        )
 
-    def _grow(self, X, truth, weight, families=None) -> tuple[Forest, np.ndarray]:
+    def _grow(self, X, truth, weight) -> tuple[Forest, np.ndarray]:
         grown = RandomForestClassifier(
             n_estimators=self.n_trees,
             min_samples_leaf=self.min_leaf,
             class_weight="balanced",
+            max_samples=min(_TREE_EXAMPLES, len(X)),
             random_state=self._seed(2),
             n_jobs=1,
         ).fit(X, truth, sample_weight=weight)
-        families = len(self.classes_) if families is None else families
-        forest = pack(grown.estimators_, grown.classes_, families)
+        forest = pack(grown.estimators_, grown.classes_, len(self.classes_))
         return forest, grown.feature_importances_
 
     def _strangeness(self, votes, raw) -> np.ndarray:
@@ -307,18 +319,24 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         )
         return X, self.forest_.vote(X)
 
+    def _raw_novelty(self, X, votes) -> np.ndarray:
+        signs = self.signs_.measure(X, votes)
+        return self.tails_.combine(signs, votes.argmax(axis=1))
+
     def predict_proba(self, X) -> np.ndarray:
         """Give calibrated probabilities, shape (n, families)."""
-        return self.map_(self._votes(X)[1])
+        votes = self._votes(X)[1]
+        return self.map_(votes)
 
     def predict(self, X) -> np.ndarray:
         """Give the most probable family of each row; never ``unknown``."""
-        return self.classes_[self.predict_proba(X).argmax(axis=1)]
+        probability = self.predict_proba(X)
+        return self.classes_[probability.argmax(axis=1)]
 
     def novelty(self, X) -> np.ndarray:
         """Give each row's novelty, 0 upward; beyond 1 the sorter declines."""
         X, votes = self._votes(X)
-        return self.novelty_.score(X, votes) / self.novelty_bar_
+        return self._raw_novelty(X, votes) / self.novelty_bar_
 
     def predict_set(self, X) -> np.ndarray:
         """Give the families that cannot be excluded: bool, shape (n, families).
@@ -328,7 +346,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         """
         X, votes = self._votes(X)
         return sets_below(
-            self._strangeness(votes, self.novelty_.score(X, votes)), self.bars_
+            self._strangeness(votes, self._raw_novelty(X, votes)), self.bars_
         )
 
     def decide(self, X) -> pd.DataFrame:
@@ -344,7 +362,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         index = X.index if isinstance(X, pd.DataFrame) else None
         X, votes = self._votes(X)
         probability = self.map_(votes)
-        raw = self.novelty_.score(X, votes)
+        raw = self._raw_novelty(X, votes)
         best = probability.argmax(axis=1)
         novelty = raw / self.novelty_bar_
         known = novelty <= 1.0
@@ -372,7 +390,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
 
 
 def _bar(raw: np.ndarray, reject: float) -> float:
-    """Give the raw novelty that ``reject`` of known examples exceed; few set the top."""
+    """Give the raw novelty that a share ``reject`` of known examples exceeds."""
     bar = conformal_bar(raw, reject)
     return max(bar if np.isfinite(bar) else float(raw.max(initial=0.0)), 1e-9)
 

@@ -23,7 +23,7 @@ DECLINED = "unknown"
 
 
 def decisions(sorter: FamilySorter) -> np.ndarray:
-    """Give each example's out-of-fold decision: a column of ``classes_``, -1 unknown."""
+    """Give each example's decision: a column of ``classes_``, or -1 for unknown."""
     held = sorter.out_of_fold_
     return np.where(held.novelty > 1.0, -1, held.probability.argmax(axis=1))
 
@@ -96,8 +96,8 @@ def set_scores(sorter: FamilySorter) -> pd.DataFrame:
     -------
     pandas.DataFrame
         ``family, examples, covered, coverage, coverage_low, coverage_high, p_value
-        (exact two-sided binomial test of 1 - alpha), mean_size, empty``; the last row is
-        ``all``.
+        (exact two-sided binomial test of 1 - alpha), mean_size, empty``; the last row
+        is ``all``.
     """
     held = sorter.out_of_fold_
     hit = held.sets[np.arange(len(held.truth)), held.truth]
@@ -225,7 +225,7 @@ def importance(
     rng: np.random.Generator,
     repeats: int = 3,
 ) -> pd.DataFrame:
-    """Measure how much accuracy is lost when a feature is shuffled (Breiman 2001).
+    """Measure what is lost when a feature is shuffled (Breiman 2001).
 
     Parameters
     ----------
@@ -244,7 +244,8 @@ def importance(
     -------
     pandas.DataFrame
         ``kind`` (feature or group), ``name, loss, spread``: mean and standard deviation
-        of the accuracy lost; largest first.
+        of the share of votes that the labelled families lose; largest first. Votes
+        show what a feature knows even where others keep the decision right.
     """
     held = sorter.out_of_fold_
     X = np.asarray(X, float)[held.rows]
@@ -252,7 +253,8 @@ def importance(
     weight = np.ones(int(train.sum()))
     forest, _ = sorter._grow(X[train], held.truth[train], weight)
     x, truth = X[~train], held.truth[~train]
-    base = (forest.vote(x).argmax(axis=1) == truth).mean()
+    index = np.arange(len(x))
+    base = forest.vote(x)[index, truth].mean()
     place = {n: i for i, n in enumerate(names)}
     units = [("feature", n, [i]) for n, i in place.items()]
     for group, members in (feature_groups or {}).items():
@@ -263,8 +265,7 @@ def importance(
         for _ in range(repeats):
             shuffled = x.copy()
             shuffled[:, columns] = x[rng.permutation(len(x))][:, columns]
-            right = forest.vote(shuffled).argmax(axis=1) == truth
-            losses.append(base - right.mean())
+            losses.append(base - forest.vote(shuffled)[index, truth].mean())
         rows.append(
             {
                 "kind": kind,

@@ -199,15 +199,12 @@ def gather(hand: pd.DataFrame, table: pd.DataFrame) -> Examples:
         family = np.concatenate([family, family[of]])
         parent = np.concatenate([parent, of])
     times = rows["gps_time"].to_numpy(float)
-    if "block" in rows:
-        groups = pd.factorize(rows["block"])[0]
-    else:
-        groups = time_groups(times)
+    block = rows["block"] if "block" in rows else time_groups(times)
     return Examples(
         features=rows[names].astype(float).reset_index(drop=True),
         family=family.astype(str),
         times_s=times,
-        groups=np.asarray(groups),
+        groups=pd.factorize(block)[0],
         parent=parent,
         matched=matched,
     )
@@ -347,8 +344,10 @@ def _notes(sorter: FamilySorter, report: TrainingReport) -> list[str]:
             "signals may be put into noise families"
         )
     if len(report.unmatched):
+        count = len(report.unmatched)
         notes.append(
-            f"{len(report.unmatched)} labels were not used; unmatched.csv says why"
+            f"{count} label{'s were' if count > 1 else ' was'} not used; unmatched.csv "
+            "says why"
         )
     return notes
 
@@ -372,7 +371,8 @@ def _write(folder: Path, report: TrainingReport, notes, config: Config) -> None:
         folder.mkdir(exist_ok=True)
     except OSError as error:
         raise OutputError(
-            f"cannot make folder {str(folder)!r}: {error.strerror}; give another --model"
+            f"cannot make folder {str(folder)!r}: {error.strerror}; choose "
+            "another --model"
         ) from error
     for name, table in report.tables().items():
         write_atomically(folder / f"{name}.csv", _csv(table, index=name == "confusion"))

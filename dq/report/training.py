@@ -116,8 +116,8 @@ def _sentences(report: TrainingReport) -> list[str]:
     if len(report.new):
         total = report.new["declined"].sum() / report.new["examples"].sum()
         out.append(
-            f"Trained without one of the families, the sorter calls {percent(total)} of "
-            "that family's examples unknown; a new kind of noise fares about so."
+            f"Trained without one of the families, the sorter calls {percent(total)} "
+            "of its examples unknown; a new kind of noise fares about so."
         )
     return out
 

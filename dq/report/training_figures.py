@@ -125,7 +125,7 @@ def learning_picture(table: pd.DataFrame) -> str:
 
 
 def importance_picture(table: pd.DataFrame, rows: int = 15) -> str:
-    """Draw the accuracy lost when a feature, or a group of them, is shuffled."""
+    """Draw the votes lost when a feature, or a group of them, is shuffled."""
     single = table[table["kind"] == "feature"].head(rows)
     groups = table[table["kind"] == "group"].head(rows)
     parts = [("one feature", single), ("a group together", groups)]
@@ -145,6 +145,6 @@ def importance_picture(table: pd.DataFrame, rows: int = 15) -> str:
                 linewidth=0.5,
             )
             axes.set_yticks(place, part["name"], fontsize=8)
-            axes.set_xlabel(f"accuracy lost by shuffling {name} (%)")
+            axes.set_xlabel(f"votes for the label lost by shuffling {name} (%)")
             axes.grid(alpha=0.25, axis="x")
         return _png(figure)
