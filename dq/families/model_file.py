@@ -232,8 +232,8 @@ class _Arrays:
         self.archive, self.where = archive, where
 
     def get(self, name: str, kind: str, shape: tuple[int | None, ...]) -> np.ndarray:
-        with self.archive.open(f"{name}.npy") as stream:
-            array = np.lib.format.read_array(stream, allow_pickle=False)
+        packed = io.BytesIO(self.archive.read(f"{name}.npy"))
+        array = np.lib.format.read_array(packed, allow_pickle=False)
         fits = array.ndim == len(shape) and all(
             want in (None, have) for want, have in zip(shape, array.shape, strict=True)
         )

@@ -66,7 +66,7 @@ def group_unknowns(
     known examples' standardised features. Its reach is the distance within which 90 %
     of the known examples have three neighbours of their own family.
     """
-    X = np.asarray(X, float).reshape(len(X), -1)
+    X = np.asarray(X, float)
     if len(X) < SMALLEST:
         return Proposals(np.zeros(len(X), int), _table([], [], []), _text(len(X), []))
     turn, reach = _metric(sorter.space_, sorter.known_, sorter.known_family_)

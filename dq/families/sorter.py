@@ -187,6 +187,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         weight = _check_sample_weight(sample_weight, X)
         self.classes_, truth = np.unique(y, return_inverse=True)
         _check_families(self.classes_)
+        _check_weight(weight, truth, self.classes_)
         root = _roots(parent, len(X))
         own = root == np.arange(len(X))
         groups = np.arange(len(X)) if groups is None else np.asarray(groups)
@@ -398,11 +399,21 @@ def _bar(raw: np.ndarray, reject: float) -> float:
 def _check_families(families: np.ndarray) -> None:
     if len(families) < 2:
         raise TrainingError(
-            f"the labels name {len(families)} family (class); at least 2 are needed"
+            f"the labels name {len(families)} class (family); at least 2 are needed"
         )
     if families.dtype.kind in "UO":
         for name in families:
             check_family(str(name))
+
+
+def _check_weight(weight, truth, families) -> None:
+    total = np.bincount(truth, weights=weight, minlength=len(families))
+    if np.any(weight < 0) or np.any(total <= 0):
+        name = families[int(total.argmin())]
+        raise TrainingError(
+            f"family (class) {name!r} has no weight, or a weight is negative; leave "
+            "such examples out"
+        )
 
 
 def _roots(parent, count: int) -> np.ndarray:

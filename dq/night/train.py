@@ -7,9 +7,8 @@ Everything is computed before anything is written, the model last.
 from __future__ import annotations
 
 import hashlib
-import logging
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -28,8 +27,6 @@ from dq.families import (
 )
 from dq.families.labels import Matched, check_family
 from dq.store import read_labels
-
-log = logging.getLogger(__name__)
 
 #: Columns of a feature table that are no features.
 ABOUT = (
@@ -139,7 +136,7 @@ def train(
         table = read_features(Path(features))
     else:
         table = _measured(config, hand, features_at or _night_features)
-    examples = gather(hand, table)
+    examples = gather(hand, table, config.site.strain)
     sorter = FamilySorter().fit(
         examples.features,
         examples.family,
@@ -168,8 +165,10 @@ def train(
     return Training(sorter, report, target, folder, notes)
 
 
-def gather(hand: pd.DataFrame, table: pd.DataFrame) -> Examples:
+def gather(hand: pd.DataFrame, table: pd.DataFrame, strain: str) -> Examples:
     """Match labels to the transients of a feature table and put examples together.
+
+    Labels of other channels than the strain are listed as unmatched.
 
     Raises
     ------
@@ -180,7 +179,12 @@ def gather(hand: pd.DataFrame, table: pd.DataFrame) -> Examples:
     names = [c for c in table.columns if c not in ABOUT]
     copies = _text(table, "parent") != ""
     own = table[~copies].reset_index(drop=True)
-    matched = match_labels(hand, own)
+    other = hand[hand["channel"] != strain]
+    matched = match_labels(hand[hand["channel"] == strain], own)
+    if len(other):
+        listed = other.assign(reason=f"its channel is not the strain, {strain}")
+        unmatched = pd.concat([matched.unmatched, listed], ignore_index=True)
+        matched = replace(matched, unmatched=unmatched)
     if not len(matched.matched):
         raise TrainingError(
             f"none of {len(hand)} labels lies at a transient; compare their times with "
@@ -269,11 +273,7 @@ def _strain_labels(path: Path, strain: str) -> pd.DataFrame:
             f"labels {str(path)!r}: no label is of the strain channel {strain!r}; "
             f"the first is of {hand['channel'].iloc[0]!r}"
         )
-    if other.any():
-        log.warning(
-            "%d labels of other channels than %s are not used", other.sum(), strain
-        )
-    return hand[~other].reset_index(drop=True)
+    return hand
 
 
 def _measured(config: Config, hand: pd.DataFrame, features_at) -> pd.DataFrame:
@@ -283,7 +283,9 @@ def _measured(config: Config, hand: pd.DataFrame, features_at) -> pd.DataFrame:
     strain = config.site.strain
     parts = [
         find_in_channel(config, strain, start=first, end=last).transients
-        for first, last in _stretches(hand["gps_time"].to_numpy(float))
+        for first, last in _stretches(
+            hand.loc[hand["channel"] == strain, "gps_time"].to_numpy(float)
+        )
     ]
     transients = pd.concat(parts, ignore_index=True)
     found = features_at(config, strain, transients)
