@@ -35,6 +35,7 @@ ABOUT = (
     "gps_time",
     "gps_start",
     "gps_end",
+    "snr",
     "parent",
     "block",
 )

@@ -11,7 +11,7 @@ from dq.cli import main as frame
 from dq.cli.main import VERBS, main
 from dq.errors import BusyError, InputError, OutputError
 
-FLOW = ["demo", "check", "find", "night", "veto", "explain", "report"]
+FLOW = ["demo", "check", "find", "train", "night", "veto", "explain", "report"]
 
 
 def run_python(*args, **options):
