@@ -90,7 +90,7 @@ def reliability_picture(table: pd.DataFrame) -> str:
         axes.set_ylim(0, 1.02)
         axes.set_xlabel("stated probability of the best family")
         axes.set_ylabel("share that was right")
-        axes.legend(frameon=False, loc="upper left")
+        axes.legend(frameon=False, loc="lower right")
         axes.grid(alpha=0.25)
         return _png(figure)
 

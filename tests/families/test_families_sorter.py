@@ -72,6 +72,33 @@ def test_sets_keep_their_promise_in_every_family(trained, fresh):
     assert sets.sum(axis=1).mean() < 1.2
 
 
+def test_votes_that_tie_do_not_swell_the_sets():
+    """Families far apart: nearly every member has every vote, yet a tenth is missed."""
+    x, y, groups = family_table(12, each=60, spread=0.3)
+    sorter = FamilySorter(n_trees=5).fit(x, y, groups=groups)
+    assert (sorter.out_of_fold_.votes.max(axis=1) == 1.0).mean() > 0.4
+    later, truth, _ = family_table(13, each=60, spread=0.3)
+    hit = sorter.predict_set(later)[
+        np.arange(len(truth)), np.searchsorted(sorter.classes_, truth)
+    ]
+    assert 0.84 <= hit.mean() <= 0.95
+
+
+def test_odd_tables_are_borne():
+    """A family seen once, a feature never measured, one that never changes."""
+    x, y, groups = family_table(14, each=20)
+    x["feature_00"], x["feature_01"] = np.nan, 3.0
+    y = y.copy()
+    y[np.flatnonzero(y == "comb")[1:]] = "ring"
+    sorter = FamilySorter(n_trees=10).fit(x, y, groups=groups)
+    table = sorter.decide(x)
+    assert table["novelty"].notna().all()
+    # one example sets no finite bar: its family can never be excluded
+    assert table["family_set"].str.contains("comb").all()
+    moved = x.assign(feature_00=1.0, feature_01=-9.0)
+    assert np.isfinite(sorter.novelty(moved)).all()
+
+
 def test_known_examples_are_rarely_declined_and_new_ones_often():
     x, y, groups = family_table(3, each=80)
     new = y == "whistle"
