@@ -94,8 +94,8 @@ def time_to_coalescence(frequency_hz, *, mass):
 
     Examples
     --------
-    >>> round(float(time_to_coalescence(40.0, mass=26.11652)), 6)
-    0.150394
+    >>> round(float(time_to_coalescence(40.0, mass=26.11652)), 5)
+    0.15039
     """
     rate = np.pi * np.asarray(frequency_hz, float)
     return 5.0 / 256.0 * rate ** (-8 / 3) * (mass * SOLAR_MASS_S) ** (-5 / 3)

@@ -47,6 +47,17 @@ _TREE_EXAMPLES = 2000
 _TIE_VOTES = 1.0
 
 
+#: What is decided of no rows: a quiet night is no error.
+_NOTHING = pd.DataFrame(
+    {
+        "family": pd.Series(dtype=object),
+        "probability": pd.Series(dtype=float),
+        "family_set": pd.Series(dtype=object),
+        "novelty": pd.Series(dtype=float),
+    }
+)
+
+
 @dataclass(frozen=True)
 class OutOfFold:
     """What was said of each example by models that had not seen its block of time.
@@ -360,6 +371,9 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             ``probability`` (of that family; missing for ``unknown``), ``family_set``
             (joined by ``;``, most voted first) and ``novelty``.
         """
+        check_is_fitted(self, "forest_")
+        if not len(X):
+            return _NOTHING.copy()
         index = X.index if isinstance(X, pd.DataFrame) else None
         X, votes = self._votes(X)
         probability = self.map_(votes)

@@ -119,6 +119,7 @@ def test_decide_gives_a_table_with_the_rows_names(trained, fresh):
     assert (declined == (table["novelty"] > 1)).all()
     assert table.loc[declined, "probability"].isna().all()
     assert table.loc[~declined, "probability"].between(0, 1).all()
+    assert list(trained.decide(x[:0]).columns) == list(table.columns)
     sets = trained.predict_set(part)
     for text, held in zip(table["family_set"], sets, strict=True):
         names = set(filter(None, text.split(";")))
