@@ -12,8 +12,8 @@ import pandas as pd
 
 from dq.counting import clopper_pearson
 from dq.families.groups import group_folds
-from dq.families.novelty import fit_tails
-from dq.families.sorter import FamilySorter, _bar
+from dq.families.novelty import fit_tails, novelty_bar
+from dq.families.sorter import FamilySorter
 
 #: Shares of the training blocks at which the learning curve is measured.
 SHARES = (0.125, 0.25, 0.5, 0.75, 1.0)
@@ -74,7 +74,7 @@ def learning_curve(
             if len(np.unique(held.truth[train])) < 2:
                 continue
             weight = np.ones(int(train.sum()))
-            forest, _ = sorter._grow(X[train], held.truth[train], weight)
+            forest, _ = sorter.grow(X[train], held.truth[train], weight)
             said[fold == f] = forest.vote(X[fold == f]).argmax(axis=1)
         folds = len(np.unique(fold))
         scores = [_f1(held.truth == k, said == k) for k in range(len(used))]
@@ -129,7 +129,7 @@ def new_families(
             signs[asked], chosen[asked] = _signs(sorter, X, held.truth, train, asked)
         tails = fit_tails(signs[known], chosen[known], len(sorter.classes_))
         usual = tails.combine(signs[known], chosen[known])
-        bar = _bar(usual, sorter.reject)
+        bar = novelty_bar(usual, sorter.reject)
         strange = tails.combine(*_signs(sorter, X, held.truth, known, ~known))
         count, declined = len(strange), int((strange > bar).sum())
         low, high = clopper_pearson(declined, count)
@@ -149,8 +149,8 @@ def new_families(
 
 def _signs(sorter, X, truth, train, asked) -> tuple[np.ndarray, np.ndarray]:
     """Give signs of novelty and the chosen family of some rows, trained on others."""
-    forest, _ = sorter._grow(X[train], truth[train], np.ones(int(train.sum())))
+    forest, _ = sorter.grow(X[train], truth[train], np.ones(int(train.sum())))
     x = X[asked]
     votes = forest.vote(x)
-    learnt = sorter._learn_signs(X[train], truth[train])
+    learnt = sorter.learn_signs(X[train], truth[train])
     return learnt.measure(x, votes), votes.argmax(axis=1)

@@ -267,7 +267,7 @@ def _sorter(head: dict, arrays: _Arrays, where: str) -> FamilySorter:
     if families < 2 or head["families"] != sorted(set(head["families"])):
         raise ModelError(f"model {where} is damaged: its families are not sorted")
     sorter = FamilySorter(**head["settings"])
-    sorter._check_settings()
+    sorter.check_settings()
     sorter.classes_ = np.array(head["families"])
     sorter.feature_names_in_ = np.array(head["features"], dtype=object)
     sorter.n_features_in_ = features

@@ -17,6 +17,7 @@ import numpy as np
 from sklearn.ensemble import ExtraTreesClassifier
 
 from dq.families.clouds import Clouds, fit_clouds
+from dq.families.conformal import conformal_bar
 from dq.families.forest import Forest, pack
 
 #: Examples of one family that the second forest is grown from at most: bounds the time.
@@ -193,3 +194,9 @@ def _thinned(family: np.ndarray, rng: np.random.Generator) -> np.ndarray:
             rows = rng.choice(rows, _FAMILY_EXAMPLES, replace=False)
         kept.append(rows)
     return np.sort(np.concatenate(kept))
+
+
+def novelty_bar(raw: np.ndarray, reject: float) -> float:
+    """Give the raw novelty that a share ``reject`` of known examples exceeds."""
+    bar = conformal_bar(raw, reject)
+    return max(bar if np.isfinite(bar) else float(raw.max(initial=0.0)), 1e-9)

@@ -9,8 +9,6 @@ time.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-
 import numpy as np
 import pandas as pd
 from sklearn.base import BaseEstimator, ClassifierMixin
@@ -30,12 +28,18 @@ from dq.families.calibration import (
     fit_map,
     mapped_out_of_fold,
 )
-from dq.families.conformal import conformal_bar, family_bars, sets_below
+from dq.families.conformal import family_bars, sets_below
+from dq.families.examples import (
+    OutOfFold,
+    check_families,
+    check_weight,
+    roots_of,
+)
 from dq.families.forest import Forest, pack
 from dq.families.groups import group_folds
 from dq.families.guard import UNKNOWN
-from dq.families.labels import SEPARATOR, check_family
-from dq.families.novelty import Signs, fit_signs, fit_tails
+from dq.families.labels import SEPARATOR
+from dq.families.novelty import Signs, fit_signs, fit_tails, novelty_bar
 from dq.families.space import fit_space
 
 #: Examples that one tree is grown from at most: on 5000 invented examples of 12
@@ -56,32 +60,6 @@ _NOTHING = pd.DataFrame(
         "novelty": pd.Series(dtype=float),
     }
 )
-
-
-@dataclass(frozen=True)
-class OutOfFold:
-    """What was said of each example by models that had not seen its block of time.
-
-    Attributes
-    ----------
-    rows : ndarray of int, shape (n,)
-        The examples' rows in the training table (replanted copies are left out).
-    truth : ndarray of int, shape (n,)
-        Column of the labelled family in ``classes_``.
-    fold, group : ndarray, shape (n,)
-    votes, probability : ndarray, shape (n, families)
-    sets : ndarray of bool, shape (n, families)
-    novelty : ndarray, shape (n,)
-    """
-
-    rows: np.ndarray
-    truth: np.ndarray
-    fold: np.ndarray
-    group: np.ndarray
-    votes: np.ndarray
-    probability: np.ndarray
-    sets: np.ndarray
-    novelty: np.ndarray
 
 
 class FamilySorter(ClassifierMixin, BaseEstimator):
@@ -190,24 +168,24 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             Fewer than two families or blocks of time, a reserved family name, or a
             setting out of its bounds.
         """
-        self._check_settings()
+        self.check_settings()
         X, y = validate_data(
             self, X, y, dtype=np.float64, ensure_all_finite="allow-nan"
         )
         check_classification_targets(y)
         weight = _check_sample_weight(sample_weight, X)
         self.classes_, truth = np.unique(y, return_inverse=True)
-        _check_families(self.classes_)
-        _check_weight(weight, truth, self.classes_)
-        root = _roots(parent, len(X))
+        check_families(self.classes_)
+        check_weight(weight, truth, self.classes_)
+        root = roots_of(parent, len(X))
         own = root == np.arange(len(X))
         groups = np.arange(len(X)) if groups is None else np.asarray(groups)
         if len(groups) != len(X):
             raise TrainingError(f"{len(groups)} groups for {len(X)} examples")
         group = np.unique(groups, return_inverse=True)[1][root]
         self._fit_out_of_fold(X, truth, weight, root, own, group)
-        self.forest_, self.importance_ = self._grow(X, truth, weight)
-        self.signs_ = self._learn_signs(X[own], truth[own])
+        self.forest_, self.importance_ = self.grow(X, truth, weight)
+        self.signs_ = self.learn_signs(X[own], truth[own])
         self.space_ = fit_space(X[own])
         self.known_ = X[own].astype(np.float32)
         self.known_family_ = truth[own].astype(np.int32)
@@ -235,8 +213,8 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         signs = np.zeros((len(rows), 3))
         for f in np.unique(fold):
             inside, train = fold == f, of_row != f
-            forest, _ = self._grow(X[train], truth[train], weight[train])
-            learnt = self._learn_signs(X[train & own], truth[train & own])
+            forest, _ = self.grow(X[train], truth[train], weight[train])
+            learnt = self.learn_signs(X[train & own], truth[train & own])
             x = X[rows[inside]]
             votes[inside] = forest.vote(x)
             signs[inside] = learnt.measure(x, votes[inside])
@@ -253,7 +231,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         self.map_ = fit_map(method, votes, truth, weight)
         strange = self._strangeness(votes, raw)
         self.bars_ = family_bars(strange, truth, self.alpha)
-        self.novelty_bar_ = _bar(raw, self.reject)
+        self.novelty_bar_ = novelty_bar(raw, self.reject)
         sets = np.zeros(votes.shape, dtype=bool)
         novelty = np.empty(len(raw))
         for f in np.unique(fold):
@@ -261,7 +239,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             inside, rest = fold == f, fold != f
             bars = family_bars(strange[rest], truth[rest], self.alpha)
             sets[inside] = sets_below(strange[inside], bars)
-            novelty[inside] = raw[inside] / _bar(raw[rest], self.reject)
+            novelty[inside] = raw[inside] / novelty_bar(raw[rest], self.reject)
         self.out_of_fold_ = OutOfFold(
             rows=rows,
             truth=truth,
@@ -273,7 +251,8 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             novelty=novelty,
         )
 
-    def _learn_signs(self, X, truth) -> Signs:
+    def learn_signs(self, X, truth) -> Signs:
+        """Learn the signs of novelty from examples; ``truth`` are columns."""
         return fit_signs(
             X,
             truth,
@@ -282,7 +261,8 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             seed=self._seed(1),
         )
 
-    def _grow(self, X, truth, weight) -> tuple[Forest, np.ndarray]:
+    def grow(self, X, truth, weight) -> tuple[Forest, np.ndarray]:
+        """Grow a forest on examples; ``truth`` are columns. Gives importances too."""
         grown = RandomForestClassifier(
             n_estimators=self.n_trees,
             min_samples_leaf=self.min_leaf,
@@ -307,7 +287,8 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             )
         return int(check_random_state(state).randint(2**31 - 1))
 
-    def _check_settings(self):
+    def check_settings(self):
+        """Refuse a setting that is out of its bounds."""
         bounds = {"alpha": (0.0, 0.5), "reject": (0.0, 0.5)}
         for name, (low, high) in bounds.items():
             value = getattr(self, name)
@@ -402,44 +383,3 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         for i in np.flatnonzero(sets.sum(axis=1) > 1):
             texts[i] = SEPARATOR.join(names[k] for k in order[i] if sets[i, k])
         return texts.tolist()
-
-
-def _bar(raw: np.ndarray, reject: float) -> float:
-    """Give the raw novelty that a share ``reject`` of known examples exceeds."""
-    bar = conformal_bar(raw, reject)
-    return max(bar if np.isfinite(bar) else float(raw.max(initial=0.0)), 1e-9)
-
-
-def _check_families(families: np.ndarray) -> None:
-    if len(families) < 2:
-        raise TrainingError(
-            f"the labels name {len(families)} class (family); at least 2 are needed"
-        )
-    if families.dtype.kind in "UO":
-        for name in families:
-            check_family(str(name))
-
-
-def _check_weight(weight, truth, families) -> None:
-    total = np.bincount(truth, weights=weight, minlength=len(families))
-    if np.any(weight < 0) or np.any(total <= 0):
-        name = families[int(total.argmin())]
-        raise TrainingError(
-            f"family (class) {name!r} has no weight, or a weight is negative; leave "
-            "such examples out"
-        )
-
-
-def _roots(parent, count: int) -> np.ndarray:
-    """Give for each row the example that it stands for: its parent or itself."""
-    rows = np.arange(count)
-    if parent is None:
-        return rows
-    parent = np.asarray(parent, dtype=np.int64)
-    if len(parent) != count:
-        raise TrainingError(f"{len(parent)} parents for {count} examples")
-    if np.any(parent >= count) or np.any(parent < -1):
-        raise TrainingError("a parent is no row of the table")
-    if np.any(parent[parent[parent >= 0]] >= 0):
-        raise TrainingError("a parent is itself a replanted copy; give its example")
-    return np.where(parent >= 0, parent, rows)

@@ -251,7 +251,7 @@ def importance(
     X = np.asarray(X, float)[held.rows]
     train = held.fold != 0
     weight = np.ones(int(train.sum()))
-    forest, _ = sorter._grow(X[train], held.truth[train], weight)
+    forest, _ = sorter.grow(X[train], held.truth[train], weight)
     x, truth = X[~train], held.truth[~train]
     index = np.arange(len(x))
     base = forest.vote(x)[index, truth].mean()
