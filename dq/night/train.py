@@ -101,6 +101,7 @@ def train(
     features: str | Path | None = None,
     features_at: Callable[[Config, str, pd.DataFrame], pd.DataFrame] | None = None,
     feature_groups: dict[str, list[str]] | None = None,
+    chirps: pd.DataFrame | None = None,
 ) -> Training:
     """Train a sorter, measure it, and write model and report.
 
@@ -119,6 +120,9 @@ def train(
         per transient; by default the night's own.
     feature_groups : dict, optional
         Features that belong together, for the report.
+    chirps : pandas.DataFrame, optional
+        Features of simulated chirps (``dq.families.chirp_waveform``), which train and
+        test the guard beside any that were labelled.
 
     Returns
     -------
@@ -138,6 +142,8 @@ def train(
     else:
         table = _measured(config, hand, features_at or _night_features)
     examples = gather(hand, table, config.site.strain)
+    if chirps is not None:
+        examples = with_chirps(examples, chirps)
     sorter = FamilySorter().fit(
         examples.features,
         examples.family,
@@ -212,6 +218,33 @@ def gather(hand: pd.DataFrame, table: pd.DataFrame, strain: str) -> Examples:
         groups=pd.factorize(block)[0],
         parent=parent,
         matched=matched,
+    )
+
+
+def with_chirps(examples: Examples, chirps: pd.DataFrame) -> Examples:
+    """Add simulated chirps, each a block of time of its own.
+
+    Raises
+    ------
+    TrainingError
+        Their features are not those of the examples.
+    """
+    names = list(examples.features.columns)
+    if list(chirps.columns) != names:
+        raise TrainingError(
+            f"simulated chirps have {len(chirps.columns)} features where the examples "
+            f"have {len(names)}, or in another order; measure both alike"
+        )
+    count, first = len(chirps), int(examples.groups.max()) + 1
+    return replace(
+        examples,
+        features=pd.concat(
+            [examples.features, chirps.astype(float)], ignore_index=True
+        ),
+        family=np.concatenate([examples.family, np.full(count, CHIRP_LIKE)]),
+        times_s=np.concatenate([examples.times_s, np.full(count, np.nan)]),
+        groups=np.concatenate([examples.groups, first + np.arange(count)]),
+        parent=np.concatenate([examples.parent, np.full(count, -1)]),
     )
 
 
@@ -386,7 +419,7 @@ def _csv(table: pd.DataFrame, *, index: bool) -> str:
     shown = table.copy()
     for name in shown.columns:
         if name == "gps_time":
-            shown[name] = [f"{t:.6f}" for t in shown[name]]
+            shown[name] = ["" if pd.isna(t) else f"{t:.6f}" for t in shown[name]]
         elif shown[name].dtype.kind == "f":
             shown[name] = ["" if pd.isna(v) else f"{v:.6g}" for v in shown[name]]
     return shown.to_csv(index=index, lineterminator="\n")

@@ -208,7 +208,7 @@ def _agreement(table: pd.DataFrame) -> list[dict]:
 def _audit(table: pd.DataFrame) -> list[dict]:
     return [
         {
-            "gps": f"{r.gps_time:.3f}",
+            "gps": "simulated" if pd.isna(r.gps_time) else f"{r.gps_time:.3f}",
             "label": r.label,
             "suggested": r.suggested,
             "own": _number(r.label_probability),

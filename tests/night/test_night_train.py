@@ -11,6 +11,7 @@ from small_site import SITE_START, write_site
 
 from dq.cli.main import main
 from dq.config import load_config
+from dq.errors import TrainingError
 from dq.families import FamilySorter, load_model
 from dq.night.train import train
 
@@ -122,6 +123,27 @@ def test_what_is_printed(training_set, tmp_path, capsys):
     out = capsys.readouterr().out
     for text in ("macro-F1", "chirp_like:", "2 labels were not used", "page:"):
         assert text in out
+
+
+def test_simulated_chirps_make_a_guard(training_set, tmp_path):
+    """None is labelled, yet the family is there and its misses are reported."""
+    text = (training_set / "labels.csv").read_text()
+    kept = [x for x in text.splitlines() if "chirp_like" not in x]
+    (tmp_path / "labels.csv").write_text("\n".join(kept) + "\n")
+    table, family, _ = family_table(72, each=20)
+    chirps = table[family == "chirp_like"]
+    options = {
+        "labels": tmp_path / "labels.csv",
+        "features": training_set / "features.csv",
+        "model": tmp_path / "m",
+    }
+    config = load_config(training_set / "dq.toml")
+    done = train(config, chirps=chirps, **options)
+    assert done.report.guard["examples"] == 20
+    assert done.report.guard["missed"] <= 2
+    assert not any("chirp_like" in note for note in done.notes)
+    with pytest.raises(TrainingError, match="measure both alike"):
+        train(config, chirps=chirps.iloc[:, ::-1], **options)
 
 
 @pytest.mark.parametrize(
