@@ -22,7 +22,7 @@ from dq.counting import clopper_pearson
 from dq.families import CHIRP_LIKE, FamilySorter
 from dq.families.scores import calibration_error
 from dq.families.validation import label_audit
-from dq.night.train import Examples, gather, read_features
+from dq.night.training_set import Examples, gather, read_features
 from dq.store import read_labels
 
 SEED = 7
