@@ -8,7 +8,7 @@ conditioning  noise spectrum, whitening, data faults
 tiles         multi-Q tile plan and normalised tile energies
 transients    loud tiles gathered into transients
 features      numbers that tell families of transients apart
-families      the sorter of families, trained from labels
+families      a sorter that learns noise families from hand labels
 motion        slow motion: levels in octave bands, fringe frequency, products
 witnesses     which auxiliary channels saw the strain's transients, beyond chance
 vetoes        faults and witnesses turned into segments under a dead-time budget
@@ -42,6 +42,8 @@ _FACES = {
     "measure": "dq.features",
     "fringe_frequency": "dq.motion",
     "band_rms": "dq.motion",
+    "FamilySorter": "dq.families",
+    "load_model": "dq.families",
     "find_witnesses": "dq.witnesses",
     "build_vetoes": "dq.vetoes",
     "choose_vetoes": "dq.vetoes",

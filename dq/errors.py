@@ -38,6 +38,17 @@ class PlanError(InputError):
     """No tile plan fits the band, the sample rate or the length of the data."""
 
 
+class TrainingError(InputError, ValueError):
+    """Labels or features from which no sorter can be trained, or that a model refuses.
+
+    Also a ``ValueError``, which is what scikit-learn expects of an estimator.
+    """
+
+
+class ModelError(InputError, ValueError):
+    """A model file cannot be used: damaged, of another version, or untrusted."""
+
+
 class NoDataError(InputError):
     """No usable data of a required channel lie in the requested range."""
 

@@ -17,7 +17,17 @@ from dq.cli.verb import debug_option
 from dq.errors import DqError
 
 #: The verbs in the order in which a night flows.
-VERBS = ("demo", "check", "find", "sort", "night", "veto", "explain", "report")
+VERBS = (
+    "demo",
+    "check",
+    "find",
+    "train",
+    "sort",
+    "night",
+    "veto",
+    "explain",
+    "report",
+)
 
 #: Exit code after Ctrl-C: 128 + the number of SIGINT, common practice.
 INTERRUPTED = 130

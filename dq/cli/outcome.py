@@ -9,6 +9,7 @@ import click
 if TYPE_CHECKING:
     from dq.night import NightOutcome
     from dq.night.judge import Verdict
+    from dq.night.train import Training
 
 #: Lines that the list of what was left out may take; the files hold the rest.
 _LISTED = 20
@@ -114,3 +115,28 @@ def align(rows: list[tuple[str, ...]]) -> str:
         cells += [c.rjust(w) for c, w in zip(row[1:], widths[1:], strict=True)]
         lines.append("  ".join(cells).rstrip())
     return "\n".join(lines)
+
+
+def print_training(done: Training) -> None:
+    """Print how good the sorter is, family by family, and where the report lies."""
+    figures, guard = done.report.figures, done.report.guard
+    rows = [("family", "examples", "precision", "recall", "F1")]
+    for row in done.report.families.itertuples():
+        scores = (f"{v:.3f}" for v in (row.precision, row.recall, row.f1))
+        rows.append((row.family, str(row.examples), *scores))
+    click.echo(align(rows))
+    click.echo(
+        f"macro-F1 {figures['macro_f1']:.3f}, calibration error "
+        f"{figures['calibration_error']:.3f}, sets cover {figures['coverage']:.1%} "
+        f"with {figures['mean_set_size']:.2f} families, declined "
+        f"{figures['declined']:.1%}; all on time not trained on"
+    )
+    if guard["examples"]:
+        click.echo(
+            f"chirp_like: {guard['missed']} of {guard['examples']} put into a noise "
+            f"family (at most {guard['high']:.1%} with 95 % confidence)"
+        )
+    for note in done.notes:
+        click.echo(f"note: {note}")
+    click.echo(f"model: {done.model}")
+    click.echo(f"page: {done.folder / 'index.html'}")

@@ -44,18 +44,9 @@ def write_page(directory: str | Path) -> Path:
 
 def render(night: NightTables) -> str:
     """Render the page; equal tables give equal text."""
-    from jinja2 import Environment, PackageLoader, StrictUndefined
-
     from dq.report.figures import map_of_transients, snr_distribution, trade_off
 
-    environment = Environment(
-        loader=PackageLoader("dq.report"),
-        autoescape=True,
-        undefined=StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-    )
-    template = environment.get_template("night.html")
+    template = environment().get_template("night.html")
     return template.render(
         site=night.site,
         strain=night.strain_name,
@@ -76,6 +67,19 @@ def render(night: NightTables) -> str:
         loudest=_loudest(night),
         channels=_channels(night),
         open_rows=_OPEN_ROWS,
+    )
+
+
+def environment():
+    """Give the templates: escaped, and strict about what they name."""
+    from jinja2 import Environment, PackageLoader, StrictUndefined
+
+    return Environment(
+        loader=PackageLoader("dq.report"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
     )
 
 

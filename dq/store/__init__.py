@@ -3,7 +3,7 @@
 from dq.store.channels import Channel, read_channel_list
 from dq.store.headers import Problem
 from dq.store.index import Store, open_store
-from dq.store.lists import read_injections, read_ready, read_triggers
+from dq.store.lists import read_injections, read_labels, read_ready, read_triggers
 from dq.store.reader import ChannelData, Series
 
 __all__ = [
@@ -15,6 +15,7 @@ __all__ = [
     "open_store",
     "read_channel_list",
     "read_injections",
+    "read_labels",
     "read_ready",
     "read_triggers",
 ]

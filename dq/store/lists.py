@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 from dq.errors import InputError, SegmentError
 from dq.segments import Segments, parse_segments, to_ns
-from dq.store.channels import positive, read_rows, read_text
+from dq.store.channels import check_name, positive, read_rows, read_text
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -91,3 +91,64 @@ def read_triggers(path: Path) -> pd.DataFrame:
     if not rows:
         raise InputError(f"{what} {str(path)!r} holds no trigger; check the file")
     return pd.DataFrame({"gps_time": times, "snr": snrs}, dtype="float64")
+
+
+#: Columns of a label list; the last two are optional.
+LABEL_COLUMNS = ("gps_time", "channel", "family", "labeller", "comment", "confidence")
+
+
+def read_labels(path: Path) -> pd.DataFrame:
+    """Read hand labels.
+
+    Returns
+    -------
+    pandas.DataFrame
+        ``gps_time`` (s), ``channel, family, labeller, comment`` (text), ``confidence``
+        (0..1, NaN where not given) and ``line`` (of the file).
+
+    Raises
+    ------
+    InputError
+        The file cannot be read, holds no label, or a cell is empty or out of bounds.
+    """
+    import pandas as pd
+
+    what = "labels"
+    rows = read_rows(path, what, LABEL_COLUMNS[:4], LABEL_COLUMNS)
+    if not rows:
+        raise InputError(f"{what} {str(path)!r} hold no label; add some")
+    table = []
+    for row in rows:
+        where = f"{what} {str(path)!r} line {row['line']}"
+        try:
+            time = to_ns(row["gps_time"]) / 1e9
+        except SegmentError as error:
+            raise InputError(f"{where}: {error}") from error
+        for column in ("family", "labeller"):
+            if not row[column]:
+                raise InputError(f"{where}: {column} is empty; fill it in")
+        check_name(row["channel"], where)
+        table.append(
+            {
+                "gps_time": time,
+                "channel": row["channel"],
+                "family": row["family"],
+                "labeller": row["labeller"],
+                "comment": row.get("comment", ""),
+                "confidence": _confidence(row.get("confidence", ""), where),
+                "line": row["line"],
+            }
+        )
+    return pd.DataFrame(table)
+
+
+def _confidence(text: str, where: str) -> float:
+    if not text:
+        return float("nan")
+    try:
+        value = float(text)
+    except ValueError:
+        value = -1.0
+    if not 0.0 <= value <= 1.0:
+        raise InputError(f"{where}: confidence = {text!r} must lie within 0..1")
+    return value

@@ -11,7 +11,17 @@ from dq.cli import main as frame
 from dq.cli.main import VERBS, main
 from dq.errors import BusyError, InputError, OutputError
 
-FLOW = ["demo", "check", "find", "sort", "night", "veto", "explain", "report"]
+FLOW = [
+    "demo",
+    "check",
+    "find",
+    "train",
+    "sort",
+    "night",
+    "veto",
+    "explain",
+    "report",
+]
 
 
 def run_python(*args, **options):
