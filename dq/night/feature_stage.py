@@ -57,10 +57,37 @@ def with_families(plan: NightPlan, folder: NightFolder, ledger: Ledger) -> Ledge
     if not wants_features(config):
         return ledger
     features = _kept_features(plan, folder, ledger)
-    families = None
-    if config.families.model is not None:
-        families = sort_features(features, config.path(config.families.model))
-    return replace(ledger, features=features, families=families)
+    if config.families.model is None:
+        return replace(ledger, features=features)
+    model = config.path(config.families.model)
+    families = sort_features(features, model)
+    sorting = _look(features, families, ledger, model)
+    return replace(ledger, features=features, families=families, sorting=sorting)
+
+
+def planted_sorter(config: Config, among: pd.DataFrame, **options):
+    """Give what sorts transients of planted data; None without a model.
+
+    Parameters
+    ----------
+    config : Config
+    among : pandas.DataFrame
+        The night's own transients, whose neighbourhood is a feature.
+    **options
+        As :func:`dq.night.strain_features.measure_transients` takes them.
+    """
+    if config.families.model is None:
+        return None
+
+    def sort(transients: pd.DataFrame, data) -> list[str]:
+        found = measure_transients(
+            data, transients, config=config, among=among, **options
+        )
+        table = feature_table(transients, found)
+        families = sort_features(table, config.path(config.families.model))
+        return families["family"].tolist()
+
+    return sort
 
 
 def feature_table(transients: pd.DataFrame, found: FeatureTable) -> pd.DataFrame:
@@ -88,7 +115,8 @@ def sort_features(features: pd.DataFrame, model: Path) -> pd.DataFrame:
     InputError
         The model cannot be used.
     """
-    sort_transients = _sorter()
+    from dq.families import sort_transients
+
     known = features[list(NAMES)].notna().all(axis=1).to_numpy()
     table = pd.DataFrame({"family": ["unsorted"] * len(features)})
     table = conform(table, FAMILY_COLUMNS)
@@ -101,30 +129,58 @@ def sort_features(features: pd.DataFrame, model: Path) -> pd.DataFrame:
     return table
 
 
-def _sorter():
-    try:
-        from dq.families import sort_transients
-    except ImportError as error:
-        raise InputError(
-            "this version of dq holds no family sorter; install one that lists "
-            "dq train in its help, or drop the model"
-        ) from error
-    return sort_transients
-
-
 def check_model(model: Path) -> None:
     """Refuse a model that cannot be used, before the work is done.
 
     Raises
     ------
     InputError
-        The file is missing, or this version has no sorter.
+        The file is missing or damaged, or was trained with other features or by
+        another version.
     """
+    from dq.families import load_model
+
     if not model.is_file():
         raise InputError(
             f"model {str(model)!r} is no file; train one or correct its path"
         )
-    _sorter()
+    load_model(model, features=list(NAMES))
+
+
+def _look(features: pd.DataFrame, families: pd.DataFrame, ledger: Ledger, model: Path):
+    """Group the unknown transients and compare the night with the training set."""
+    from dq.families import UNKNOWN, drift, drift_text, group_unknowns, load_model
+
+    sorter, _ = load_model(model, features=list(NAMES))
+    known = features[list(NAMES)].notna().all(axis=1).to_numpy()
+    measured = features.loc[known, list(NAMES)]
+    unknown = (families["family"] == UNKNOWN).to_numpy(bool)
+    analysed = ledger.time("analysed")[ledger.strain]
+    groups = group_unknowns(
+        features.loc[unknown, list(NAMES)].to_numpy(float),
+        sorter,
+        live_time_s=analysed.total_s,
+    )
+    moved = drift_text(
+        drift(measured, sorter),
+        declined=int(unknown.sum()),
+        total=len(measured),
+        reject=sorter.reject,
+    )
+    names = features.loc[unknown, "transient_id"].to_numpy(object)
+    table = [
+        {
+            "count": int(row.count_),
+            "per_hour": round(float(row.per_hour), 3),
+            "typical": str(names[row.typical]),
+            "nearest": str(row.nearest),
+        }
+        for row in groups.table.rename(columns={"count": "count_"}).itertuples()
+    ]
+    log.info("%s", groups.text)
+    if moved:
+        log.warning("%s", moved)
+    return {"unknowns": groups.text, "groups": table, "drift": moved}
 
 
 def _kept_features(plan: NightPlan, folder: NightFolder, ledger: Ledger):

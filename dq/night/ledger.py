@@ -6,7 +6,7 @@ its channels are done: there is one way from channels to vetoes, not two.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 
 import numpy as np
@@ -67,6 +67,9 @@ class Ledger:
         night measures none.
     families : pandas.DataFrame or None
         ``FAMILY_COLUMNS``, likewise; None without a model.
+    sorting : dict
+        What the sorter says of the night: ``unknowns`` and ``drift`` in words, and the
+        ``groups`` of unknown transients; empty without a model or when read back.
     """
 
     strain: str
@@ -75,6 +78,7 @@ class Ledger:
     coverage: pd.DataFrame
     features: pd.DataFrame | None = None
     families: pd.DataFrame | None = None
+    sorting: dict = field(default_factory=dict)
 
     @property
     def sorted_strain(self) -> pd.DataFrame:

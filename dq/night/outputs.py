@@ -72,6 +72,7 @@ def new_manifest(plan: NightPlan, ledger: Ledger, left_out: dict[str, str]) -> d
         "request_sha256": plan.request,
         "left_out": dict(sorted(left_out.items())),
         "faulty": ledger.faulty,
+        "sorting": ledger.sorting,
         "files": {},
     }
 

@@ -159,7 +159,7 @@ def plant_signals(
     for run in plan_runs(night.analysed, config.vetoes.signal_loss_plants):
         seed = [run.start_ns // NS, len(run.times)]
         rng = np.random.default_rng(seed)
-        signals = [_scaled(data, night, t, rng) for t in run.times]
+        signals = [_drawn(data, night, t, rng) for t in run.times]
         signals = [s for s in signals if s is not None]
         planted = PlantedData(data, signals)
         found = analyse_channel(
@@ -180,19 +180,24 @@ def plant_signals(
     return conform(pd.DataFrame(rows, columns=names), PLANTED)
 
 
-def _scaled(data: ChannelData, night: ChannelResult, time_ns: int, rng):
+def _drawn(data: ChannelData, night: ChannelResult, time_ns: int, rng):
     """Draw a signal near a time and give it with the factor for its SNR."""
     time_ns += int(rng.integers(-SPACING_S * NS // 4, SPACING_S * NS // 4))
     signal = draw_signal(time_ns, rng, low_hz=night.f_low_hz, high_hz=night.f_high_hz)
+    return scaled(data, night, signal)
+
+
+def scaled(data: ChannelData, night: ChannelResult, signal: Signal):
+    """Give a signal with the factor for its SNR; None where too few data are near."""
     half = round(_NOISE_S * NS)
-    pieces = data.read(time_ns - half, time_ns + half)
+    pieces = data.read(signal.time_ns - half, signal.time_ns + half)
     if not pieces:
         return None
     noise = max(pieces, key=lambda s: len(s.values))
     rate = float(data.rate)
     low, high = _reach(signal)
     count = max(int((high - low) / NS * rate), 8)
-    waveform = signal.waveform((low - time_ns) / NS + np.arange(count) / rate)
+    waveform = signal.waveform((low - signal.time_ns) / NS + np.arange(count) / rate)
     if len(noise.values) < 8 * rate:
         return None
     unit = optimal_snr(
@@ -205,6 +210,14 @@ def _scaled(data: ChannelData, night: ChannelResult, time_ns: int, rng):
     return (signal, signal.snr / unit) if unit > 0 else None
 
 
+def is_new(found: pd.DataFrame, before: pd.DataFrame) -> np.ndarray:
+    """Say which transients are not among those found without the signals."""
+    digits = {"gps_time": 3, "snr": 1}
+    known = before[list(digits)].round(digits)
+    mine = found[list(digits)].round(digits)
+    return ~pd.MultiIndex.from_frame(mine).isin(pd.MultiIndex.from_frame(known))
+
+
 def _row(signal: Signal, found: pd.DataFrame, before: pd.DataFrame) -> dict:
     """Give the loudest new transient at a signal's time."""
     row = {"gps_time": signal.time_ns / NS, "kind": signal.kind, "snr": signal.snr}
@@ -213,11 +226,7 @@ def _row(signal: Signal, found: pd.DataFrame, before: pd.DataFrame) -> dict:
         to_ns_array(found[c].to_numpy(float)) for c in ("gps_start", "gps_end")
     )
     here = (start < signal.time_ns + near) & (end > signal.time_ns - near)
-    # what the night found there without the signal is not the signal
-    known = before[["gps_time", "snr"]].round({"gps_time": 3, "snr": 1})
-    mine = found[["gps_time", "snr"]].round({"gps_time": 3, "snr": 1})
-    old = pd.MultiIndex.from_frame(mine).isin(pd.MultiIndex.from_frame(known))
-    rows = found[here & ~old]
+    rows = found[here & is_new(found, before)]
     if not len(rows):
         return row | {"found": False, "family": ""}
     best = rows.loc[rows["snr"].idxmax()]

@@ -13,7 +13,7 @@ from typing import TYPE_CHECKING
 from dq.config import Config
 from dq.errors import NoDataError
 from dq.night.channel import ChannelResult
-from dq.night.feature_stage import check_model, with_families
+from dq.night.feature_stage import check_model, planted_sorter, with_families
 from dq.night.folder import STATE, NightFolder, check_folder
 from dq.night.inputs import Inputs, check_range, read_inputs
 from dq.night.ledger import make_ledger
@@ -171,14 +171,14 @@ def _planted(plan: NightPlan, strain: ChannelResult) -> pd.DataFrame | None:
     from dq.night.planting import plant_signals
 
     row = inputs.strain
-    return plant_signals(
-        inputs.store.channel(row.name),
-        strain,
-        ready=inputs.wanted,
-        config=inputs.config,
-        f_low_hz=row.f_low_hz,
-        f_high_hz=row.f_high_hz,
-    )
+    options = {
+        "ready": inputs.wanted,
+        "f_low_hz": row.f_low_hz,
+        "f_high_hz": row.f_high_hz,
+    }
+    sort = planted_sorter(inputs.config, strain.transients, **options)
+    data = inputs.store.channel(row.name)
+    return plant_signals(data, strain, config=inputs.config, sort=sort, **options)
 
 
 def _problems(inputs: Inputs, left_out: dict[str, str]) -> dict[str, str]:

@@ -48,6 +48,7 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
         },
         "untraced_fraction": float(1 - traced.mean()) if len(strain) else _UNKNOWN,
         "untraced_interval": _interval(len(strain) - int(traced.sum()), len(strain)),
+        "sorting": manifest.get("sorting", {}),
         "vetoes": list(dict.fromkeys(verdict.vetoes["veto"])),
         "dead_time_s": total["dead_time_s"],
         "dead_time_fraction": total["dead_time_fraction"],

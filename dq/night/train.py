@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -24,12 +24,17 @@ from dq.families import (
     save_model,
 )
 from dq.families.labels import check_family
+from dq.night.channel import ChannelResult
 from dq.night.training_set import Examples, gather, read_features, with_chirps
 from dq.store import read_labels
 
 #: Seconds around a label in which transients are found: the neighbourhood that
 #: features look at reaches 30 s.
 _AROUND_S = 32
+
+#: Simulated chirps that are planted: a miss rate of 3 % shows with an interval from
+#: 1 to 7 %.
+GUARD_CHIRPS = 150
 
 #: A family needs examples in this many blocks before anything measured of it counts.
 _FEWEST_BLOCKS = 2
@@ -82,10 +87,12 @@ def train(
         ``features_at(config, channel, transients)`` gives the feature table, one row
         per transient; by default the night's own.
     feature_groups : dict, optional
-        Features that belong together, for the report.
+        Features that belong together, for the report; by default the tool's own
+        groups where all features are its own.
     chirps : pandas.DataFrame, optional
-        Features of simulated chirps (``dq.families.chirp_waveform``), which train and
-        test the guard beside any that were labelled.
+        Features of simulated chirps, which train and test the guard beside any that
+        were labelled; by default they are planted into the data (``dq.night.guard``)
+        unless the features come ready.
 
     Returns
     -------
@@ -103,9 +110,15 @@ def train(
     if features is not None:
         table = read_features(Path(features))
     else:
-        table = _measured(config, hand, features_at or _night_features)
+        found = _found(config, hand)
+        measured = (features_at or _night_features)(
+            config, config.site.strain, found.transients
+        )
+        table = _feature_table(found.transients, measured)
+        if chirps is None and features_at is None:
+            chirps = _night_chirps(config, found)
     examples = gather(hand, table, config.site.strain)
-    if chirps is not None:
+    if chirps is not None and len(chirps):
         examples = with_chirps(examples, chirps)
     sorter = FamilySorter().fit(
         examples.features,
@@ -118,7 +131,7 @@ def train(
         examples.features,
         times_s=examples.times_s,
         matched=examples.matched,
-        feature_groups=feature_groups,
+        feature_groups=feature_groups or _own_groups(examples),
     )
     notes = tuple(_notes(sorter, report))
     meta = _about(config, Path(labels), examples, report)
@@ -126,6 +139,18 @@ def train(
     _write(folder, report, notes, config)
     save_model(target, sorter, meta)
     return Training(sorter, report, target, folder, notes)
+
+
+def _own_groups(examples: Examples) -> dict[str, list[str]] | None:
+    """Give the tool's groups of features, where the examples have all of them."""
+    from dq.features import FEATURES
+
+    if {f.name for f in FEATURES} != set(examples.features.columns):
+        return None
+    groups: dict[str, list[str]] = {}
+    for feature in FEATURES:
+        groups.setdefault(feature.group, []).append(feature.name)
+    return groups
 
 
 def _about(config: Config, labels: Path, examples: Examples, report) -> dict:
@@ -160,23 +185,30 @@ def _strain_labels(path: Path, strain: str) -> pd.DataFrame:
     return hand
 
 
-def _measured(config: Config, hand: pd.DataFrame, features_at) -> pd.DataFrame:
-    """Find the transients near the labels and measure them."""
+def _found(config: Config, hand: pd.DataFrame) -> ChannelResult:
+    """Find the transients near the labels."""
     from dq.night.find import find_in_channel
 
     strain = config.site.strain
+    labelled = hand.loc[hand["channel"] == strain, "gps_time"].to_numpy(float)
     parts = [
-        find_in_channel(config, strain, start=first, end=last).transients
-        for first, last in _stretches(
-            hand.loc[hand["channel"] == strain, "gps_time"].to_numpy(float)
-        )
+        find_in_channel(config, strain, start=first, end=last)
+        for first, last in _stretches(labelled)
     ]
-    transients = pd.concat(parts, ignore_index=True)
-    found = features_at(config, strain, transients)
-    about = transients[["gps_time", "gps_start", "gps_end"]].reset_index(drop=True)
-    table = pd.concat([about, found.reset_index(drop=True)], axis=1)
-    measured = found.notna().any(axis=1).to_numpy()
-    return table[measured]
+    analysed = parts[0].analysed
+    for part in parts[1:]:
+        analysed |= part.analysed
+    transients = pd.concat([p.transients for p in parts], ignore_index=True)
+    return replace(parts[0], transients=transients, analysed=analysed)
+
+
+def _feature_table(transients: pd.DataFrame, measured: pd.DataFrame) -> pd.DataFrame:
+    """Put the transients' times and SNR before their features; drop the unmeasured."""
+    about = transients[["gps_time", "gps_start", "gps_end", "snr"]]
+    table = pd.concat(
+        [about.reset_index(drop=True), measured.reset_index(drop=True)], axis=1
+    )
+    return table[measured.notna().any(axis=1).to_numpy()]
 
 
 def _stretches(times: np.ndarray) -> list[tuple[int, int]]:
@@ -191,29 +223,35 @@ def _stretches(times: np.ndarray) -> list[tuple[int, int]]:
     return out
 
 
-def _night_features(config: Config, channel: str, transients) -> pd.DataFrame:
-    """Measure transients as a night does."""
-    # TO FINISH WITH THE FEATURE STAGE: the only tie between training and features
+def _strain_of(config: Config):
+    """Give the strain's data and how a night analyses it."""
     from dq.night.inputs import read_inputs
 
-    try:
-        from dq.night.strain_features import measure_transients
-    except ImportError as error:
-        raise InputError(
-            "this version measures no features at labelled times; give a ready table "
-            "with --features"
-        ) from error
     inputs = read_inputs(config)
     row = inputs.strain
-    found = measure_transients(
-        inputs.store.channel(channel),
-        transients,
-        ready=inputs.wanted,
-        config=config,
-        f_low_hz=row.f_low_hz,
-        f_high_hz=row.f_high_hz,
-    )
-    return found.table
+    options = {
+        "ready": inputs.wanted,
+        "config": config,
+        "f_low_hz": row.f_low_hz,
+        "f_high_hz": row.f_high_hz,
+    }
+    return inputs.store.channel(row.name), options
+
+
+def _night_features(config: Config, channel: str, transients) -> pd.DataFrame:
+    """Measure transients as a night does."""
+    from dq.night.strain_features import measure_transients
+
+    data, options = _strain_of(config)
+    return measure_transients(data, transients, **options).table
+
+
+def _night_chirps(config: Config, found: ChannelResult) -> pd.DataFrame:
+    """Plant the guard's chirps into the labelled stretches."""
+    from dq.night.guard import chirp_features
+
+    data, options = _strain_of(config)
+    return chirp_features(data, found, count=GUARD_CHIRPS, **options)
 
 
 def _notes(sorter: FamilySorter, report: TrainingReport) -> list[str]:

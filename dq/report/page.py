@@ -55,6 +55,8 @@ def render(night: NightTables) -> str:
         version=night.manifest.get("dq_version", ""),
         facts=facts(night),
         sentences=sentences(night),
+        families=_families(night),
+        groups=_groups(night),
         map=map_of_transients(night),
         curve=trade_off(night),
         worth=worth(night),
@@ -148,11 +150,43 @@ def sentences(night: NightTables) -> list[str]:
             f"No accepted witness was active at {percent(untraced)} of the strain's "
             f"transients{sure}."
         )
+    sorting = night.summary.get("sorting") or {}
+    if sorting.get("unknowns"):
+        out.append(f"The sorter declined {sorting['unknowns']}.")
+    if sorting.get("drift"):
+        out.append(f"Beware, {sorting['drift']}: the sorter may be out of date.")
     if not len(night.strain):
         out.append("No transient was found above the threshold.")
     elif not len(night.accepted()):
         out.append("No witness was found beyond chance.")
     return out
+
+
+def _families(night: NightTables) -> list[dict]:
+    """Give a row for each family, the most frequent first; none without a sorter."""
+    strain = night.strain
+    if not len(strain) or set(strain["family"]) <= {"unsorted"}:
+        return []
+    rows = []
+    for name, part in strain.groupby("family", sort=True):
+        seen = part["witness"].fillna("").str.split(";").explode()
+        seen = seen[seen != ""].value_counts()
+        rows.append(
+            {
+                "name": str(name),
+                "count": len(part),
+                "share": percent(len(part) / len(strain)),
+                "snr": f"{part['snr'].median():.1f}",
+                "sure": percent(part["probability"].mean()),
+                "vetoed": percent((part["veto"].fillna("") != "").mean()),
+                "witness": _text(seen.index[0]) if len(seen) else "",
+            }
+        )
+    return sorted(rows, key=lambda row: (-row["count"], row["name"]))
+
+
+def _groups(night: NightTables) -> list[dict]:
+    return (night.summary.get("sorting") or {}).get("groups") or []
 
 
 def _vetoes(night: NightTables) -> list[dict]:

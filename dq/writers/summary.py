@@ -29,6 +29,7 @@ KEYS = (
     "channels",
     "settings_sha256",
     "inputs_sha256",
+    "sorting",
 )
 
 
