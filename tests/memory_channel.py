@@ -2,23 +2,14 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
 from fractions import Fraction
 
 import numpy as np
 
 from dq.segments import Segments
+from dq.store import Series
 
 NS = 1_000_000_000
-
-
-@dataclass(frozen=True)
-class MemorySeries:
-    """Contiguous samples."""
-
-    start_ns: int
-    rate: Fraction
-    values: np.ndarray
 
 
 class MemoryChannel:
@@ -32,6 +23,8 @@ class MemoryChannel:
         length = round(len(values) * NS / self.rate)
         self.recorded = Segments.of([(start_ns, start_ns + length)])
         self.samples_read = 0
+        self.unit = ""
+        self.problems, self.read_problems = [], []
 
     def read(self, start_ns, end_ns):
         """Give the finite stretches in ``[start_ns, end_ns)``."""
@@ -41,7 +34,7 @@ class MemoryChannel:
         self.samples_read += len(part)
         edges = np.flatnonzero(np.diff(np.isfinite(part), prepend=False, append=False))
         return [
-            MemorySeries(
+            Series(
                 self.start_ns + round(Fraction(int(first + a) * NS) / self.rate),
                 self.rate,
                 part[a:b],

@@ -50,7 +50,7 @@ class FeatureTable:
     left_out: dict[int, str] = field(default_factory=dict)
 
 
-class _Pass:
+class FeaturePass:
     """Snippets wait here until there are enough to be measured together."""
 
     def __init__(self, transients: pd.DataFrame, among, config: Config, f_low: float):
@@ -64,13 +64,18 @@ class _Pass:
         self.waiting: dict[int, Snippet] = {}
         self.samples = 0
 
+    def see(self, cutter: BlockCutter) -> None:
+        """Look at a block before its transients are cut; nothing to see here."""
+
     def add(self, position: int, snippet: Snippet) -> None:
+        """Take a transient's snippet."""
         self.waiting[position] = snippet
         self.samples += len(snippet.values)
         if self.samples >= _KEPT_SAMPLES:
             self.flush()
 
     def flush(self) -> None:
+        """Measure what waits."""
         at = sorted(self.waiting)
         if at:
             rows = self.transients.iloc[at]
@@ -119,13 +124,34 @@ def measure_transients(
     PlanError
         The band does not fit the channel's rate.
     """
-    tiles = config.tiles
-    f_low = f_low_hz or tiles.f_low_hz or default_low_edge(float(data.rate))
-    plan = plan_blocks(data.rate, config, f_low, f_high_hz or tiles.f_high_hz)
+    work = FeaturePass(transients, among, config, low_edge(data, config, f_low_hz))
+    band = {"f_low_hz": f_low_hz, "f_high_hz": f_high_hz}
+    left_out = walk(data, work, ready=ready, config=config, progress=progress, **band)
+    table = pd.DataFrame(work.values, columns=list(NAMES), index=transients.index)
+    return FeatureTable(table, left_out)
+
+
+def low_edge(data, config: Config, f_low_hz: float | None) -> float:
+    """Give the lower edge of the band that is searched, Hz."""
+    return f_low_hz or config.tiles.f_low_hz or default_low_edge(float(data.rate))
+
+
+def walk(
+    data,
+    work: FeaturePass,
+    *,
+    ready: Segments | None,
+    config: Config,
+    f_low_hz: float | None = None,
+    f_high_hz: float | None = None,
+    progress=None,
+) -> dict[int, str]:
+    """Go over the blocks that hold transients; give those that cannot be cut."""
+    f_low = low_edge(data, config, f_low_hz)
+    plan = plan_blocks(data.rate, config, f_low, f_high_hz or config.tiles.f_high_hz)
     ready = data.recorded if ready is None else ready & data.recorded
     blocks = WhitenedBlocks(data, plan, config, ready)
-    work = _Pass(transients, among, config, f_low)
-    times = to_ns_array(transients["gps_time"].to_numpy(float))
+    times = to_ns_array(work.transients["gps_time"].to_numpy(float))
     block = times // plan.block_ns
     left_out = {}
     inside = ready.contains(times)
@@ -141,8 +167,7 @@ def measure_transients(
             progress((number + 1) / len(steps))
     work.flush()
     left_out |= {int(i): NOT_READY for i in np.flatnonzero(~inside)}
-    table = pd.DataFrame(work.values, columns=list(NAMES), index=transients.index)
-    return FeatureTable(table, dict(sorted(left_out.items())))
+    return dict(sorted(left_out.items()))
 
 
 def _block(blocks: WhitenedBlocks, index: int, here, times, work) -> dict[int, str]:
@@ -158,7 +183,8 @@ def _block(blocks: WhitenedBlocks, index: int, here, times, work) -> dict[int, s
         if not mine:
             continue
         left = {i: reason for i, reason in left.items() if i not in mine}
-        cutter = _Cutter(blocks, piece, block_ns, whitening)
+        cutter = BlockCutter(blocks, piece, block_ns, whitening)
+        work.see(cutter)
         for i in mine:
             snippet = cutter.cut(work.transients.iloc[i], int(times[i]))
             if snippet is None:
@@ -168,7 +194,7 @@ def _block(blocks: WhitenedBlocks, index: int, here, times, work) -> dict[int, s
     return left
 
 
-class _Cutter:
+class BlockCutter:
     """One block of one piece as a whitened series."""
 
     def __init__(self, blocks: WhitenedBlocks, piece, block_ns: int, whitening):

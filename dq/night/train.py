@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
@@ -24,17 +24,9 @@ from dq.families import (
     save_model,
 )
 from dq.families.labels import check_family
-from dq.night.channel import ChannelResult
+from dq.night.labelled import measure_labelled
 from dq.night.training_set import Examples, gather, read_features, with_chirps
 from dq.store import read_labels
-
-#: Seconds around a label in which transients are found: the neighbourhood that
-#: features look at reaches 30 s.
-_AROUND_S = 32
-
-#: Simulated chirps that are planted: a miss rate of 3 % shows with an interval from
-#: 1 to 7 %.
-GUARD_CHIRPS = 150
 
 #: A family needs examples in this many blocks before anything measured of it counts.
 _FEWEST_BLOCKS = 2
@@ -110,13 +102,8 @@ def train(
     if features is not None:
         table = read_features(Path(features))
     else:
-        found = _found(config, hand)
-        measured = (features_at or _night_features)(
-            config, config.site.strain, found.transients
-        )
-        table = _feature_table(found.transients, measured)
-        if chirps is None and features_at is None:
-            chirps = _night_chirps(config, found)
+        table, planted = measure_labelled(config, hand, features_at)
+        chirps = planted if chirps is None else chirps
     examples = gather(hand, table, config.site.strain)
     if chirps is not None and len(chirps):
         examples = with_chirps(examples, chirps)
@@ -183,75 +170,6 @@ def _strain_labels(path: Path, strain: str) -> pd.DataFrame:
             f"the first is of {hand['channel'].iloc[0]!r}"
         )
     return hand
-
-
-def _found(config: Config, hand: pd.DataFrame) -> ChannelResult:
-    """Find the transients near the labels."""
-    from dq.night.find import find_in_channel
-
-    strain = config.site.strain
-    labelled = hand.loc[hand["channel"] == strain, "gps_time"].to_numpy(float)
-    parts = [
-        find_in_channel(config, strain, start=first, end=last)
-        for first, last in _stretches(labelled)
-    ]
-    analysed = parts[0].analysed
-    for part in parts[1:]:
-        analysed |= part.analysed
-    transients = pd.concat([p.transients for p in parts], ignore_index=True)
-    return replace(parts[0], transients=transients, analysed=analysed)
-
-
-def _feature_table(transients: pd.DataFrame, measured: pd.DataFrame) -> pd.DataFrame:
-    """Put the transients' times and SNR before their features; drop the unmeasured."""
-    about = transients[["gps_time", "gps_start", "gps_end", "snr"]]
-    table = pd.concat(
-        [about.reset_index(drop=True), measured.reset_index(drop=True)], axis=1
-    )
-    return table[measured.notna().any(axis=1).to_numpy()]
-
-
-def _stretches(times: np.ndarray) -> list[tuple[int, int]]:
-    """Merge the seconds around the labels into stretches."""
-    out: list[tuple[int, int]] = []
-    for t in np.sort(times):
-        first, last = int(np.floor(t)) - _AROUND_S, int(np.ceil(t)) + _AROUND_S
-        if out and first <= out[-1][1]:
-            out[-1] = (out[-1][0], max(last, out[-1][1]))
-        else:
-            out.append((max(first, 0), last))
-    return out
-
-
-def _strain_of(config: Config):
-    """Give the strain's data and how a night analyses it."""
-    from dq.night.inputs import read_inputs
-
-    inputs = read_inputs(config)
-    row = inputs.strain
-    options = {
-        "ready": inputs.wanted,
-        "config": config,
-        "f_low_hz": row.f_low_hz,
-        "f_high_hz": row.f_high_hz,
-    }
-    return inputs.store.channel(row.name), options
-
-
-def _night_features(config: Config, channel: str, transients) -> pd.DataFrame:
-    """Measure transients as a night does."""
-    from dq.night.strain_features import measure_transients
-
-    data, options = _strain_of(config)
-    return measure_transients(data, transients, **options).table
-
-
-def _night_chirps(config: Config, found: ChannelResult) -> pd.DataFrame:
-    """Plant the guard's chirps into the labelled stretches."""
-    from dq.night.guard import chirp_features
-
-    data, options = _strain_of(config)
-    return chirp_features(data, found, count=GUARD_CHIRPS, **options)
 
 
 def _notes(sorter: FamilySorter, report: TrainingReport) -> list[str]:

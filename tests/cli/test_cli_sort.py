@@ -2,11 +2,10 @@
 
 import csv
 import io
-import sys
-import types
 
 import pandas as pd
 import pytest
+import stand_in_sorter
 from small_site import SITE_BURSTS, SITE_SECONDS, SITE_START
 
 from dq.cli.main import main
@@ -28,9 +27,7 @@ def model(monkeypatch, tmp_path):
             }
         )
 
-    module = types.ModuleType("dq.families")
-    module.sort_transients = sort_transients
-    monkeypatch.setitem(sys.modules, "dq.families", module)
+    stand_in_sorter.install(monkeypatch, sort_transients)
     path = tmp_path / "model.skops"
     path.write_text("stand-in")
     return str(path)

@@ -1,11 +1,10 @@
 """Features and families within a night: files, resuming, turning off, dq veto."""
 
 import json
-import sys
-import types
 
 import pandas as pd
 import pytest
+import stand_in_sorter
 from small_site import SITE_SECONDS, SITE_START
 
 from dq.config import load_config
@@ -57,9 +56,7 @@ def sorter(monkeypatch):
             }
         )
 
-    module = types.ModuleType("dq.families")
-    module.sort_transients = sort_transients
-    monkeypatch.setitem(sys.modules, "dq.families", module)
+    stand_in_sorter.install(monkeypatch, sort_transients)
 
 
 def test_a_night_writes_features_only_when_asked(small_site, tmp_path, here):
@@ -144,12 +141,12 @@ def test_a_model_that_is_not_there_is_told_before_the_work(small_site, tmp_path)
     assert not (tmp_path / "night").exists()
 
 
-def test_without_a_sorter_a_model_is_refused(small_site, tmp_path, monkeypatch):
-    monkeypatch.setitem(sys.modules, "dq.families", None)
+def test_a_file_that_is_no_model_is_told_before_the_work(small_site, tmp_path):
     config = small_site(extra='[families]\nmodel = "model.txt"\n')
     (config.parent / "model.txt").write_text("60")
-    with pytest.raises(InputError, match="no family sorter"):
+    with pytest.raises(InputError, match="model"):
         night(config, tmp_path / "night")
+    assert not (tmp_path / "night").exists()
 
 
 def test_lost_files_are_told_in_one_line(small_site, tmp_path, here, monkeypatch):

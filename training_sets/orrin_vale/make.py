@@ -7,7 +7,8 @@ transients with the tool itself, and writes ``features.csv`` and ``labels.csv`` 
 Two invented analysts label: the first looks at nearly all transients and errs in 2 of
 100, the second at a quarter and errs in 4. ``--truth`` writes one right label for each.
 Simulated chirps of 5 to 60 solar masses are planted between the transients and labelled
-``chirp_like`` by ``simulation``.
+``chirp_like`` by ``simulation``. Quieter copies of the transients, planted into other
+noise, follow them in the table and name their ``parent``; ``--truth`` makes none.
 """
 
 from __future__ import annotations
@@ -24,9 +25,11 @@ from dq.config import load_config
 from dq.families import CHIRP_LIKE, chirp_waveform, draw_chirps
 from dq.families.guard import chirp_mass, time_to_coalescence
 from dq.features import NAMES
+from dq.night.copies import measure_copies
 from dq.night.find import find_in_channel
 from dq.night.inputs import read_inputs
 from dq.night.judge import transient_ids
+from dq.night.labelled import COPIES, copy_rows
 from dq.night.strain_features import measure_transients
 from dq.observatory import SiteSettings
 from dq.observatory.families import Source
@@ -127,7 +130,7 @@ def named(found: pd.DataFrame, truth: pd.DataFrame) -> np.ndarray:
     return np.array(names)
 
 
-def one_night(seed: int, noise: float) -> pd.DataFrame:
+def one_night(seed: int, noise: float, *, copies: bool) -> pd.DataFrame:
     """Give the measured transients of one seed with their true family."""
     night = plan_night(settings_of(seed, noise))
     chirps = add_chirps(night, np.random.default_rng([seed, 1]))
@@ -143,26 +146,32 @@ def one_night(seed: int, noise: float) -> pd.DataFrame:
         start, end = night.settings.start, night.settings.start + 3600
         found = find_in_channel(config, STRAIN, start=start, end=end).transients
         inputs = read_inputs(config)
-        measured = measure_transients(
-            inputs.store.channel(STRAIN),
-            found,
-            ready=inputs.wanted,
-            config=config,
-            f_low_hz=10.0,
-        ).table
-    about = found[["gps_time", "gps_start", "gps_end", "snr"]].copy()
-    about.insert(0, "transient_id", transient_ids(found))
-    table = pd.concat([about, measured], axis=1)
-    table["family"] = named(found, truth_of(night, chirps))
-    known = (table["family"] != "") & (table["snr"] >= LEAST_SNR)
-    return table[known & measured.notna().all(axis=1)]
+        data = inputs.store.channel(STRAIN)
+        options = {"ready": inputs.wanted, "config": config, "f_low_hz": 10.0}
+        measured = measure_transients(data, found, **options).table
+        about = found[["gps_time", "gps_start", "gps_end", "snr"]].copy()
+        about.insert(0, "transient_id", transient_ids(found))
+        table = pd.concat([about.assign(parent=""), measured], axis=1)
+        table["family"] = named(found, truth_of(night, chirps))
+        known = (table["family"] != "") & (table["snr"] >= LEAST_SNR)
+        known &= measured.notna().all(axis=1)
+        table = table[known].reset_index(drop=True)
+        if not copies:
+            return table
+        examples = found[known.to_numpy()].reset_index(drop=True)
+        quieter = measure_copies(
+            data, examples, per_example=COPIES, among=found, **options
+        )
+        more = copy_rows(examples, quieter)
+        more["family"] = table["family"].to_numpy()[quieter["parent"].astype(int)]
+        return pd.concat([table, more], ignore_index=True)
 
 
 def labels_of(table: pd.DataFrame, rng: np.random.Generator, *, truth: bool):
     """Give label rows: what the invented analysts wrote, or the truth."""
     families = sorted(set(table["family"]) - {CHIRP_LIKE})
     rows = []
-    for row in table.itertuples():
+    for row in table[table["parent"] == ""].itertuples():
         time = f"{row.gps_time:.6f}"
         if truth or row.family == CHIRP_LIKE:
             who = "truth" if truth else "simulation"
@@ -187,11 +196,13 @@ def main() -> None:
     options = parser.parse_args()
     low, _, high = options.seeds.partition("-")
     seeds = range(int(low), int(high or low) + 1)
-    table = pd.concat([one_night(s, options.noise) for s in seeds], ignore_index=True)
+    nights = [one_night(s, options.noise, copies=not options.truth) for s in seeds]
+    table = pd.concat(nights, ignore_index=True)
     rng = np.random.default_rng([seeds[0], len(seeds)])
     labels = labels_of(table, rng, truth=options.truth)
     options.directory.mkdir(parents=True, exist_ok=True)
-    columns = ["transient_id", "gps_time", "gps_start", "gps_end", "snr", *NAMES]
+    columns = ["transient_id", "gps_time", "gps_start", "gps_end", "snr", "parent"]
+    columns += NAMES
     shown = table[columns].copy()
     for name in ("gps_time", "gps_start", "gps_end"):
         shown[name] = [f"{v:.6f}" for v in table[name]]
@@ -199,8 +210,11 @@ def main() -> None:
         shown[name] = [f"{v:.6g}" for v in table[name]]
     shown.to_csv(options.directory / "features.csv", index=False, lineterminator="\n")
     labels.to_csv(options.directory / "labels.csv", index=False, lineterminator="\n")
-    print(table["family"].value_counts().to_string())
-    print(f"{len(table)} transients, {len(labels)} labels")
+    own = table[table["parent"] == ""]
+    print(own["family"].value_counts().to_string())
+    print(
+        f"{len(own)} transients, {len(table) - len(own)} copies, {len(labels)} labels"
+    )
 
 
 if __name__ == "__main__":
