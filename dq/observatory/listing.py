@@ -205,6 +205,8 @@ def config_text(night: Night) -> str:
         'channels = "channels.csv"\n'
         'ready = "ready.txt"\n'
         'injections = "injections.csv"\n\n'
+        "[families]\n"
+        'model = "families.model"  # trained on other nights of this site\n\n'
         "[vetoes]\n"
         "max_dead_time = 0.05  # fraction of analysed time\n"
     )
@@ -224,6 +226,7 @@ def readme_text(night: Night) -> str:
         "ready.txt       when the detector was ready\n"
         "injections.csv  actuated test signals\n"
         "labels.csv      what invented people called some transients\n"
+        "families.model  a family sorter, trained on other nights\n"
         "dq.toml         the configuration\n"
         "truth/          what was planted; for tests, never an input\n"
     )

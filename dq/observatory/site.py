@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import shutil
 from collections.abc import Callable
 from contextlib import ExitStack
 from dataclasses import replace
@@ -22,6 +23,10 @@ from dq.observatory.recording import (
 )
 from dq.observatory.schedule import Night, plan_night
 from dq.observatory.settings import SiteSettings
+
+#: The family sorter that comes with the site, trained from ``training_sets/orrin_vale``
+#: (its README says how).
+MODEL = Path(__file__).with_name("families.model")
 
 Progress = Callable[[int, int, str], None]
 
@@ -129,6 +134,8 @@ def _make(directory: Path, settings: SiteSettings, progress: Progress) -> Path:
         "truth/faults.csv": listing.fault_truth(night, saturations),
         "dq.toml": listing.config_text(night),
     }
+    # the configuration names the model, so the model stands there first
+    shutil.copyfile(MODEL, directory / MODEL.name)
     for name, text in texts.items():
         (directory / name).write_text(text, encoding="utf-8")
     return config
