@@ -215,6 +215,28 @@ class Witnesses(_Section):
         le=1000,
         description="fewer coincidences never accept a channel (own choice)",
     )
+    slides: int = Field(
+        default=100,
+        ge=0,
+        le=100_000,
+        description="circular slides of the strain that the highest score of all "
+        "channels is held against; 100 resolve a chance of 1 %; 0 = none",
+    )
+    safety_window_s: float = Field(
+        default=0.25,
+        gt=0.0,
+        le=10.0,
+        description="s; a channel active within this of a test signal answers it, and "
+        "a strain transient within it is the test signal itself (own choice: longer "
+        "than delays across a site)",
+    )
+    safe_leak: float = Field(
+        default=0.1,
+        gt=0.0,
+        le=1.0,
+        description="a channel is safe when at most this share of signals could be "
+        "heard in it at 95 % confidence (own choice; needs 36 unanswered test signals)",
+    )
     slow_max_rate_hz: float = Field(
         default=256.0,
         ge=0.0,

@@ -96,6 +96,8 @@ WITNESSES: tuple[Column, ...] = (
         ("after_s", "s", "%g", "window after it"),
     ),
     Column("kind", "text", meaning="transients, motion, fringe or product"),
+    Column("q_value", "float", "1", "%.4g", "false-discovery rate at this row"),
+    Column("redundant_with", "text", meaning="better witness of the same transients"),
 )
 
 #: Columns of ``vetoes.csv``.
@@ -180,6 +182,13 @@ PLANTED: tuple[Column, ...] = (
         ("found_snr", "1", "%.4f", "its SNR"),
     ),
     Column("family", "text", meaning="the family that it was sorted into"),
+)
+
+#: Columns of a night's ``injections.csv``: the test signals that it knew of.
+INJECTIONS: tuple[Column, ...] = (
+    Column("gps_time", "float", "s", "%.6f"),
+    Column("kind", "text"),
+    Column("snr", "float", "1", "%.4f", "as the user's list says"),
 )
 
 #: Columns of a night's ``channels.csv``: how every channel of the list fared.

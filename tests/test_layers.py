@@ -85,7 +85,7 @@ OWNERS = {
         "night",
         "observatory",
     },
-    "numba": {"conditioning", "tiles", "transients", "families"},
+    "numba": {"conditioning", "tiles", "transients", "families", "witnesses"},
     "matplotlib": {"report"},
     "jinja2": {"report"},
     "erfa": {"gps"},

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
-from dq.counting import binomial_chance
+from dq.counting import benjamini_hochberg, binomial_chance
 from dq.families.sorter import FamilySorter
 
 #: False-discovery rate among the features (common practice).
@@ -14,22 +14,6 @@ LEVEL = 0.01
 #: Smaller differences of the distributions are not worth a word, however significant
 #: (own choice; 0 equal, 1 disjoint).
 SMALLEST_EFFECT = 0.15
-
-
-def benjamini_hochberg(p: np.ndarray) -> np.ndarray:
-    """Give the false-discovery rate at which each test would be called.
-
-    Notes
-    -----
-    Benjamini & Hochberg 1995, J. R. Stat. Soc. B 57 289.
-    """
-    p = np.asarray(p, float)
-    order = np.argsort(p, kind="stable")
-    scaled = p[order] * len(p) / np.arange(1, len(p) + 1)
-    rising = np.minimum.accumulate(scaled[::-1])[::-1]
-    out = np.empty(len(p))
-    out[order] = np.minimum(rising, 1.0)
-    return out
 
 
 def drift(features: pd.DataFrame, sorter: FamilySorter) -> pd.DataFrame:

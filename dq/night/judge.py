@@ -78,7 +78,8 @@ def judge(
     _mention_absent_families(config, strain)
 
     def select(part: Segments) -> Selection:
-        _, other, chosen = _decide(ledger, config, part, whole=analysed)
+        # slides cost most of the search, and a half would resolve less with them
+        _, other, chosen = _decide(ledger, config, part, whole=analysed, slides=0)
         return Selection(veto_segments(other, analysed), chosen.chosen)
 
     cost, volume = measure_vetoes(
@@ -99,7 +100,12 @@ def _auxiliary(ledger: Ledger) -> dict[str, pd.DataFrame]:
 
 
 def _decide(
-    ledger: Ledger, config: Config, part: Segments, *, whole: Segments | None = None
+    ledger: Ledger,
+    config: Config,
+    part: Segments,
+    *,
+    whole: Segments | None = None,
+    slides: int | None = None,
 ) -> tuple[pd.DataFrame, pd.DataFrame, Choice]:
     """Select witnesses, build vetoes and choose, from the strain within some time.
 
@@ -116,6 +122,8 @@ def _decide(
         auxiliary_analysed=judged,
         safety=ledger.safety,
         settings=config.witnesses,
+        injections=ledger.signals_ns,
+        slides=slides,
     )
     built = build_vetoes(
         witnesses,

@@ -15,10 +15,11 @@ import pandas as pd
 from dq.errors import InputError
 from dq.features.registry import FEATURES
 from dq.night.channel import ChannelResult
-from dq.segments import Segments
+from dq.segments import Segments, to_ns_array
 from dq.store import Channel
 from dq.tables import (
     COVERAGE,
+    INJECTIONS,
     NIGHT_CHANNELS,
     PLANTED,
     STRAIN_TRANSIENTS,
@@ -44,6 +45,7 @@ _FAMILY = ("family", "probability", "family_set", "novelty")
 #: What the sorter says of a transient: columns of ``strain_transients.csv``.
 FAMILY_COLUMNS = tuple(c for c in STRAIN_TRANSIENTS if c.name in _FAMILY)
 PLANTED_FILE = "planted.csv"
+INJECTIONS_FILE = "injections.csv"
 
 _ACCOUNTED = ("analysed", "missing", "unjudged")
 
@@ -70,6 +72,8 @@ class Ledger:
     sorting : dict
         What the sorter says of the night: ``unknowns`` and ``drift`` in words, and the
         ``groups`` of unknown transients; empty without a model or when read back.
+    injections : pandas.DataFrame or None
+        ``dq.tables.INJECTIONS``; None where the configuration names no test signals.
     """
 
     strain: str
@@ -79,6 +83,14 @@ class Ledger:
     features: pd.DataFrame | None = None
     families: pd.DataFrame | None = None
     sorting: dict = field(default_factory=dict)
+    injections: pd.DataFrame | None = None
+
+    @property
+    def signals_ns(self) -> np.ndarray | None:
+        """Times of the test signals, nanoseconds; None where none are listed."""
+        if self.injections is None:
+            return None
+        return to_ns_array(self.injections["gps_time"].to_numpy(float))
 
     @property
     def sorted_strain(self) -> pd.DataFrame:
@@ -245,6 +257,7 @@ def read_ledger(directory: Path, strain: str) -> Ledger:
         _read_table(directory / COVERAGE_FILE, COVERAGE),
         features,
         families,
+        injections=_read_optional(directory / INJECTIONS_FILE, INJECTIONS),
     )
 
 
@@ -268,15 +281,14 @@ def _read_table(path: Path, columns, *, rows: int | None = None):
     return table
 
 
-def write_planted(directory: Path, planted: pd.DataFrame | None) -> None:
-    """Write the simulated signals of a night; without any there is no file."""
+def write_optional(path: Path, table: pd.DataFrame | None, columns) -> None:
+    """Write a table that a night may have; without one there is no file."""
     from dq.writers import write_table
 
-    path = directory / PLANTED_FILE
-    if planted is None:
+    if table is None:
         path.unlink(missing_ok=True)
     else:
-        write_table(path, planted, PLANTED)
+        write_table(path, table, columns)
 
 
 def read_planted(directory: Path) -> pd.DataFrame | None:
@@ -287,5 +299,8 @@ def read_planted(directory: Path) -> pd.DataFrame | None:
     InputError
         The table is damaged.
     """
-    path = directory / PLANTED_FILE
-    return _read_table(path, PLANTED) if path.exists() else None
+    return _read_optional(directory / PLANTED_FILE, PLANTED)
+
+
+def _read_optional(path: Path, columns) -> pd.DataFrame | None:
+    return _read_table(path, columns) if path.exists() else None

@@ -24,19 +24,23 @@ from dq.night.ledger import (
     COVERAGE_FILE,
     FEATURE_COLUMNS,
     FEATURES_FILE,
+    INJECTIONS_FILE,
+    PLANTED_FILE,
     STRAIN_FILE,
     TRANSIENTS_FILE,
     Ledger,
     read_ledger,
     read_planted,
-    write_planted,
+    write_optional,
 )
 from dq.night.plan import NightPlan
 from dq.night.summary import summarise_night
 from dq.segments import seconds_text, to_ns
 from dq.tables import (
     COVERAGE,
+    INJECTIONS,
     NIGHT_CHANNELS,
+    PLANTED,
     STRAIN_TRANSIENTS,
     VETO_COST,
     VETO_CURVE,
@@ -121,7 +125,8 @@ def write_night(
     write_table(directory / CHANNELS_FILE, ledger.channels, NIGHT_CHANNELS)
     write_table(directory / COVERAGE_FILE, ledger.coverage, COVERAGE)
     _write_features(directory, ledger)
-    write_planted(directory, planted)
+    write_optional(directory / PLANTED_FILE, planted, PLANTED)
+    write_optional(directory / INJECTIONS_FILE, ledger.injections, INJECTIONS)
     lap("tables")
     return write_verdict(directory, config, manifest, lap=lap)
 

@@ -6,7 +6,7 @@ import logging
 import os
 import time
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -117,6 +117,7 @@ def run_night(
             log.warning("left out: %s: %s", name, reason)
         rows = [inputs.strain, *inputs.auxiliary, *product_rows(inputs)]
         ledger = make_ledger(rows, results, left_out)
+        ledger = replace(ledger, injections=inputs.injections)
         ledger = with_families(plan, folder, ledger)
         clock.lap("features")
         manifest = new_manifest(plan, ledger, left_out)

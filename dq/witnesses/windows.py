@@ -70,24 +70,6 @@ def windows_of(witness, transients) -> Segments:
     )
 
 
-def union_of_windows(times: np.ndarray, half: int) -> tuple[np.ndarray, np.ndarray]:
-    """Give starts and ends of the union of windows around sorted times.
-
-    Parameters
-    ----------
-    times : ndarray of int64, sorted
-        Nanoseconds.
-    half : int
-        Half-width, nanoseconds.
-    """
-    if len(times) == 0:
-        return times, times
-    breaks = np.flatnonzero(np.diff(times) > 2 * half)
-    starts = times[np.append(0, breaks + 1)] - half
-    ends = times[np.append(breaks, len(times) - 1)] + half
-    return starts, ends
-
-
 class FusedTime:
     """Segments laid end to end: a position is the covered time before a moment.
 

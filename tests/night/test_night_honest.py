@@ -7,7 +7,7 @@ import pytest
 from dq.config import parse_config
 from dq.cost import alternate_blocks
 from dq.night.judge import judge
-from dq.night.ledger import Ledger, read_planted, write_planted
+from dq.night.ledger import PLANTED_FILE, Ledger, read_planted, write_optional
 from dq.segments import NS, Segments
 from dq.tables import (
     COVERAGE,
@@ -178,7 +178,7 @@ def test_nothing_is_measured_where_it_is_switched_off(rng):
 def test_planted_signals_round_trip_and_vanish(tmp_path):
     assert read_planted(tmp_path) is None
     table = planted(3, ["thunder", "unknown", "chirp_like"])
-    write_planted(tmp_path, table)
+    write_optional(tmp_path / PLANTED_FILE, table, PLANTED)
     pd.testing.assert_frame_equal(read_planted(tmp_path), table)
-    write_planted(tmp_path, None)
+    write_optional(tmp_path / PLANTED_FILE, None, PLANTED)
     assert list(tmp_path.iterdir()) == []

@@ -17,7 +17,14 @@ from dq.witnesses.chance import (
     inner_spacings,
     shifted_counts,
 )
-from dq.witnesses.windows import hits, union_of_windows
+from dq.witnesses.windows import hits
+
+
+def union_of_windows(times, half):
+    """Give the union of windows around sorted times."""
+    union = Segments.from_arrays(times - half, times + half)
+    return union.starts, union.ends
+
 
 GPS = 1_420_000_000
 HOUR = 3600
@@ -28,7 +35,9 @@ def table(rng, times):
     """Make transients with the steep law of SNR that detectors show."""
     times = np.sort(np.asarray(times, float))
     snr = 5.5 * (1 + rng.pareto(2.0, len(times)))
-    return pd.DataFrame({"gps_time": GPS + times, "snr": snr})
+    at = GPS + times
+    columns = dict.fromkeys(("gps_time", "gps_start", "gps_end"), at)
+    return pd.DataFrame(columns | {"snr": snr})
 
 
 def draw(rng, kind, n):

@@ -9,7 +9,7 @@ from dq.config import Witnesses
 from dq.segments import Segments
 from dq.tables import WITNESSES
 from dq.witnesses import find_witnesses, veto_windows
-from dq.witnesses.windows import FusedTime, hits, union_of_windows
+from dq.witnesses.windows import FusedTime, hits
 
 GPS = 1_420_000_000
 HOUR = 3600
@@ -19,7 +19,8 @@ QUICK = Witnesses(snr_thresholds=[5.5, 10.0], half_windows_s=[0.1, 0.5])
 
 def table(times, snr=8.0):
     times = np.sort(np.asarray(times, float))
-    return pd.DataFrame({"gps_time": times, "snr": np.broadcast_to(snr, times.shape)})
+    columns = dict.fromkeys(("gps_time", "gps_start", "gps_end"), times)
+    return pd.DataFrame(columns | {"snr": np.broadcast_to(snr, times.shape)})
 
 
 def uniform(rng, n):
@@ -62,8 +63,7 @@ def test_significance_and_expectation_are_the_formulas(rng):
     strain, other = table(uniform(rng, 50)), table(uniform(rng, 80))
     settings = Witnesses(snr_thresholds=[5.5], half_windows_s=[0.5])
     row = find(strain, {"OV-A": other}, settings=settings).iloc[0]
-    points = other.assign(gps_start=other.gps_time, gps_end=other.gps_time)
-    windows = veto_windows(points, snr_threshold=5.5, before_s=0.5, after_s=0.5) & WHOLE
+    windows = veto_windows(other, snr_threshold=5.5, before_s=0.5, after_s=0.5) & WHOLE
     inside = windows.contains(np.round(strain.gps_time.to_numpy() * 1e9).astype(int))
     assert row.coincidences == inside.sum()
     assert row.dead_time_s == pytest.approx(windows.total_s)
@@ -113,7 +113,7 @@ def test_p_value_is_the_calibrated_chance_times_all_trials(rng):
     out = find(strain, auxiliary)
     assert (out.trials == 5 * 2).all()  # one set of transients, two half-windows
     want = np.minimum(1, out.trials * 10**-out.calibrated_significance)
-    np.testing.assert_allclose(out.p_value, want.astype(float))
+    np.testing.assert_allclose(out.p_value, want.astype(float), rtol=1e-4)
     assert (out.calibrated_significance <= out.significance).all()
 
 
@@ -170,15 +170,9 @@ def test_order_does_not_depend_on_the_order_of_channels(rng):
     one = find(table(causes), auxiliary)
     two = find(table(causes), dict(reversed(auxiliary.items())))
     pd.testing.assert_frame_equal(one, two)
-    assert one.channel.tolist() == ["OV-A", "OV-B", "OV-C"]
-
-
-def test_windows_equal_the_slow_twin(rng):
-    times = np.sort(rng.integers(0, 10**6, 300))
-    for half in (10, 500, 5000):
-        starts, ends = union_of_windows(times, half)
-        union = Segments.of([(int(t) - half, int(t) + half) for t in times])
-        assert list(zip(starts.tolist(), ends.tolist(), strict=True)) == list(union)
+    # three copies of one cause: one is chosen, the others repeat it
+    assert one.accepted.tolist() == [True, False, False]
+    assert one.redundant_with.tolist()[1:] == [one.channel[0]] * 2
 
 
 def test_fused_time_measures_covered_time(rng):

@@ -1,0 +1,297 @@
+"""Every threshold and window of many channels against every target.
+
+A combination is one (channel, target, threshold, half-window). Its score is the smaller
+of two significances: Poisson's for the coincidences, and that for clusters of targets
+met by the windows against the most that chance meets (``dq.witnesses.chance``). The
+second is worked out only where the first could matter; below ``PLAIN`` the first stands
+alone, which for shifted targets errs to the safe side.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from dq.counting import poisson_significance
+from dq.segments import NS, Segments
+from dq.witnesses.chance import (
+    calibrated_significance,
+    clusters_expected,
+    shifted_counts,
+)
+from dq.witnesses.joint import Activity, Joint, Targets
+from dq.witnesses.kernel import count_windows
+from dq.witnesses.windows import hits
+
+#: Plain significance from which on clusters are looked at. The loudest of a thousand
+#: trials reaches 3 by chance; a night has many more.
+PLAIN = 3.0
+
+#: Windows that cover more than this share of the joint time say nothing about the rest
+#: (own choice).
+MOST_DEAD = 0.5
+
+#: Channels counted at a time: their shifted counts take some ten MiB.
+TOGETHER = 32
+
+
+@dataclass(frozen=True)
+class Combination:
+    """A channel at one threshold and half-window against one target.
+
+    Attributes
+    ----------
+    threshold, half_window_s : float
+    coincidences, total : int
+        Target transients in the windows, and in the joint time.
+    expected : float
+        By chance: all of them times the fraction of dead time.
+    clusters : int
+    clusters_expected : float
+        The same for clusters of transients, at most.
+    dead_s, joint_s : float
+    significance : float
+        Of the coincidences, by Poisson's law.
+    sober : float
+        The smallest of the significances measured so far.
+    dispersion : float
+        Of the shifted counts; not a number until measured.
+    windows, windows_hit : int
+    """
+
+    threshold: float
+    half_window_s: float
+    coincidences: int
+    total: int
+    expected: float
+    clusters: int
+    clusters_expected: float
+    dead_s: float
+    joint_s: float
+    significance: float
+    sober: float
+    dispersion: float = float("nan")
+    windows: int = 0
+    windows_hit: int = 0
+
+    @property
+    def separate(self) -> int:
+        """Coincidences that share neither a window nor a cluster."""
+        return min(self.clusters, self.windows_hit)
+
+
+@dataclass
+class Scores:
+    """What a pass over the channels found.
+
+    Attributes
+    ----------
+    best : dict of (str, str) to Combination
+        The best combination of a channel for a target; absent where none was tested.
+    tested : dict of (str, str) to int
+        Combinations tested.
+    loudest : ndarray, shape (n_slides,)
+        For each shift of the targets the highest score of any combination.
+    joint_s : dict of str to float
+        Jointly analysed time of each channel, s.
+    """
+
+    best: dict[tuple[str, str], Combination] = field(default_factory=dict)
+    tested: dict[tuple[str, str], int] = field(default_factory=dict)
+    loudest: np.ndarray = field(default_factory=lambda: np.zeros(0))
+    joint_s: dict[str, float] = field(default_factory=dict)
+
+
+class Channels:
+    """The channels that may be witnesses, as arrays.
+
+    Parameters
+    ----------
+    tables : mapping of str to pandas.DataFrame
+        Columns of ``dq.tables.TRANSIENTS``.
+    judged : mapping of str to Segments
+    settings : dq.config.Witnesses
+    """
+
+    def __init__(self, tables: Mapping, judged: Mapping[str, Segments], settings):
+        self.tables = tables
+        self.judged = judged
+        self.settings = settings
+        halves = [round(h * NS) for h in settings.half_windows_s]
+        self.halves = np.array(halves, dtype=np.int64)
+
+    def activity(self, name: str) -> Activity:
+        """Give a channel's activity."""
+        return Activity.of(self.tables[name])
+
+    def score(
+        self,
+        names: Iterable[str],
+        targets: Targets,
+        analysed: Segments,
+        *,
+        slides: int = 0,
+    ) -> Scores:
+        """Score channels against targets within the strain's analysed time."""
+        scores = Scores(loudest=np.zeros(slides))
+        alike: dict[Segments, list[str]] = {}
+        for name in names:
+            time = analysed & self.judged.get(name, Segments.none())
+            scores.joint_s[name] = time.total_s
+            if time:
+                alike.setdefault(time, []).append(name)
+        for time, members in alike.items():
+            joint = Joint(targets, time, slides)
+            if not len(joint.targets.times):
+                continue
+            for first in range(0, len(members), TOGETHER):
+                self._score_some(members[first : first + TOGETHER], joint, scores)
+        return scores
+
+    def _score_some(self, names: list[str], joint: Joint, scores: Scores) -> None:
+        active = [self.activity(n) for n in names]
+        ladders = [self.settings.ladder(n) for n in names]
+        ladder = np.full((len(names), max(map(len, ladders))), np.nan)
+        for row, values in zip(ladder, ladders, strict=True):
+            row[: len(values)] = values
+        shape = (*ladder.shape, len(self.halves))
+        counted = (*shape, len(joint.slid[0]), len(joint.counts))
+        dead = np.full(shape, -1, dtype=np.int64)
+        found = np.zeros(counted, dtype=np.int32)
+        met = np.zeros(counted, dtype=np.int32)
+        count_windows(
+            (
+                np.concatenate([a.start for a in active]),
+                np.concatenate([a.end for a in active]),
+                np.concatenate([a.snr for a in active]),
+            ),
+            np.append(0, np.cumsum([len(a.start) for a in active])),
+            ladder,
+            self.halves,
+            joint.segments,
+            joint.slid,
+            int(MOST_DEAD * joint.total),
+            (dead, found, met),
+        )
+        sober = _scores(joint, active, ladder, self.settings, dead, found, met)
+        if len(scores.loudest):
+            highest = sober[..., 1:, :].max(axis=(0, 1, 2, 4))
+            np.maximum(scores.loudest, highest, out=scores.loudest)
+        for c, name in enumerate(names):
+            for m, target in enumerate(joint.targets.names):
+                tests = int(np.count_nonzero(dead[c] >= 0)) if joint.counts[m] else 0
+                scores.tested[name, target] = tests
+                if tests:
+                    scores.best[name, target] = self._best(
+                        joint, active[c], ladder[c], m, (dead, found, met, sober), c
+                    )
+
+    def _best(self, joint, activity, ladder, m: int, counted, c: int) -> Combination:
+        """Give the highest score; of equal ones the least dead time."""
+        dead, found, met, sober = (x[c] for x in counted)
+        score, cost = sober[..., 0, m], dead / NS
+        tested = dead >= 0
+        order = np.lexsort((cost[tested], -score[tested]))
+        t, w = np.argwhere(tested)[order[0]]
+        threshold, half = float(ladder[t]), self.settings.half_windows_s[w]
+        low, high = joint.windows(activity, threshold, half)
+        where = hits(joint.positions[m], low, high)
+        expected = joint.counts[m] * dead[t, w] / joint.total
+        count = int(found[t, w, 0, m])
+        most = _most_clusters(joint, m, low, high)
+        grouped = float(poisson_significance(met[t, w, 0, m], most))
+        return Combination(
+            threshold=threshold,
+            half_window_s=half,
+            coincidences=count,
+            total=int(joint.counts[m]),
+            expected=float(expected),
+            clusters=int(met[t, w, 0, m]),
+            clusters_expected=most,
+            dead_s=float(cost[t, w]),
+            joint_s=joint.total / NS,
+            significance=float(poisson_significance(count, expected)),
+            sober=min(float(score[t, w]), grouped),
+            windows=len(low),
+            windows_hit=len(np.unique(where[where >= 0])),
+        )
+
+    def measured(
+        self, found: Combination, name: str, targets: Targets, analysed: Segments
+    ) -> Combination:
+        """Give a combination as it stands over all of some analysed time."""
+        joint = Joint(targets, analysed & self.judged[name])
+        low, high = joint.windows(
+            self.activity(name), found.threshold, found.half_window_s
+        )
+        where = hits(joint.positions[0], low, high)
+        inside = where >= 0
+        dead, total = int(np.sum(high - low)), len(where)
+        met = np.logical_or.reduceat(inside, joint.first[0]) if total else inside
+        expected = total * dead / joint.total
+        return replace(
+            found,
+            coincidences=int(inside.sum()),
+            total=total,
+            expected=expected,
+            clusters=int(met.sum()),
+            clusters_expected=_most_clusters(joint, 0, low, high),
+            dead_s=dead / NS,
+            joint_s=joint.total / NS,
+            significance=float(poisson_significance(inside.sum(), expected)),
+            windows=len(low),
+            windows_hit=len(np.unique(where[inside])),
+        )
+
+    def calibrate(
+        self, found: Combination, name: str, targets: Targets, analysed: Segments
+    ) -> Combination:
+        """Hold a combination against many more shifts; never raises its score."""
+        joint = Joint(targets, analysed & self.judged[name])
+        low, high = joint.windows(
+            self.activity(name), found.threshold, found.half_window_s
+        )
+        shifted = shifted_counts(
+            joint.positions[0], joint.first[0], low, high, joint.total
+        )
+        most = _most_clusters(joint, 0, low, high)
+        significance, wide = calibrated_significance(found.clusters, most, shifted)
+        return replace(found, sober=min(found.sober, significance), dispersion=wide)
+
+
+def _most_clusters(joint: Joint, target: int, low, high) -> float:
+    return clusters_expected(
+        int(joint.clusters[target]), joint.spacings(target), low, high, joint.total
+    )
+
+
+def _scores(joint, active, ladder, settings, dead, found, met) -> np.ndarray:
+    """Give the score of every combination and shift, shape as ``found``."""
+    share = np.where(dead >= 0, dead, 0) / joint.total
+    expected = share[..., None, None] * joint.counts
+    sober = np.zeros(found.shape, dtype=np.float32)
+    # at fewer Poisson's significance is about 1 or less
+    worth = found > expected + 1.5 * np.sqrt(expected)
+    worth &= dead[..., None, None] >= 0
+    index = np.nonzero(worth)
+    plain = poisson_significance(
+        found[index], np.broadcast_to(expected, found.shape)[index]
+    )
+    sober[index] = plain
+    high = plain >= PLAIN
+    if not high.any():
+        return sober
+    rows = [i[high] for i in index]
+    combination = np.stack([rows[0], rows[1], rows[2], rows[4]])
+    which, place = np.unique(combination, axis=1, return_inverse=True)
+    most = np.empty(which.shape[1])
+    for k, (c, t, w, m) in enumerate(which.T):
+        low, high_ = joint.windows(
+            active[c], float(ladder[c, t]), settings.half_windows_s[w]
+        )
+        most[k] = _most_clusters(joint, int(m), low, high_)
+    grouped = poisson_significance(met[tuple(rows)], most[place.ravel()])
+    sober[tuple(rows)] = np.minimum(plain[high], grouped)
+    return sober

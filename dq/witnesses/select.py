@@ -1,0 +1,147 @@
+"""Witnesses step by step: the most significant first, what it explains removed.
+
+Smith et al. 2011, Class. Quantum Grav. 28 235005. After each step the chosen channel's
+windows leave the analysed time and its targets leave the targets; the others are scored
+anew on what is left, until none is significant. A channel that only repeats a better
+one has nothing left and is named redundant with it.
+
+Two chances are held against a score s. The conservative one counts every combination of
+every channel and target as a trial (Bonferroni); a channel that may be accepted is
+first held against circular shifts of its own (``dq.witnesses.chance``). The other looks
+at the highest score of all combinations in each of many circular slides of the strain:
+where n of K slides reach s it is (n + 1) / (K + 1), whatever rhythm or clumping the
+channels have. The larger of the two decides where a slide reaches s at all.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from dq.segments import NS, Segments
+from dq.witnesses.joint import Targets
+from dq.witnesses.score import Channels, Combination, Scores
+
+#: Channels whose first chance is above this are not scored again: what others explain
+#: only takes targets away from them.
+LOOSE = 0.5
+
+
+@dataclass(frozen=True)
+class Chance:
+    """From a score to its chance over all that was tried.
+
+    Attributes
+    ----------
+    trials : int
+    loudest : ndarray
+        Highest score of each slide; empty without slides.
+    """
+
+    trials: int
+    loudest: np.ndarray
+
+    def of(self, score: float) -> float:
+        """Give the chance of a score this high anywhere."""
+        counted = float(10.0 ** min(np.log10(max(self.trials, 1)) - score, 0.0))
+        reached = int(np.count_nonzero(self.loudest >= score))
+        if not reached:
+            return counted
+        return max(counted, (reached + 1) / (len(self.loudest) + 1))
+
+
+@dataclass
+class Selection:
+    """What the steps for one target came to.
+
+    Attributes
+    ----------
+    chosen : list of (str, Combination)
+        In order, as scored when chosen.
+    decided : dict of str to Combination
+        Last score of the channels that were looked at closely.
+    redundant : dict of str to str
+        Channels that were significant before the named one was chosen.
+    thin : set of str
+        Significant, but with too few separate coincidences.
+    """
+
+    chosen: list[tuple[str, Combination]] = field(default_factory=list)
+    decided: dict[str, Combination] = field(default_factory=dict)
+    redundant: dict[str, str] = field(default_factory=dict)
+    thin: set[str] = field(default_factory=set)
+
+
+def select(
+    channels: Channels,
+    names: list[str],
+    targets: Targets,
+    analysed: Segments,
+    first: Scores,
+    chance: Chance,
+) -> Selection:
+    """Select the witnesses of one target.
+
+    Parameters
+    ----------
+    channels : Channels
+    names : list of str
+        Channels that may be chosen.
+    targets : Targets
+        One target.
+    analysed : Segments
+    first : Scores
+        Of all channels over all of the time.
+    chance : Chance
+
+    Returns
+    -------
+    Selection
+    """
+    alpha = channels.settings.false_alarm_probability
+    fewest = channels.settings.min_coincidences
+    target = targets.names[0]
+    now = {
+        name: found
+        for name in names
+        if (found := first.best.get((name, target))) is not None
+        and chance.of(found.sober) <= LOOSE
+    }
+    out, calibrated = Selection(), set()
+    was = {n for n, found in now.items() if chance.of(found.sober) <= alpha}
+    while now:
+        name = max(now, key=lambda n: (now[n].sober, -now[n].dead_s, n))
+        found = now[name]
+        if chance.of(found.sober) > alpha:
+            break
+        if name not in calibrated:
+            calibrated.add(name)
+            now[name] = channels.calibrate(found, name, targets, analysed)
+            out.decided[name] = now[name]
+            continue
+        del now[name]
+        if found.separate < fewest:
+            out.thin.add(name)
+            continue
+        out.chosen.append((name, found))
+        analysed = analysed - _windows(channels, name, found)
+        targets = targets.within(analysed)
+        again = channels.score(sorted(now), targets, analysed)
+        now = {
+            n: again.best[n, target] for n in sorted(now) if (n, target) in again.best
+        }
+        calibrated.clear()
+        left = {n for n, f in now.items() if chance.of(f.sober) <= alpha}
+        for other in was - left - {name}:
+            if other not in out.thin:
+                out.redundant.setdefault(other, name)
+        was = left
+    return out
+
+
+def _windows(channels: Channels, name: str, found: Combination) -> Segments:
+    activity = channels.activity(name)
+    loud = activity.snr >= found.threshold
+    half = round(found.half_window_s * NS)
+    return Segments.from_arrays(activity.start[loud] - half, activity.end[loud] + half)
