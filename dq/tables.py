@@ -98,6 +98,7 @@ WITNESSES: tuple[Column, ...] = (
     Column("kind", "text", meaning="transients, motion, fringe or product"),
     Column("q_value", "float", "1", "%.4g", "false-discovery rate at this row"),
     Column("redundant_with", "text", meaning="better witness of the same transients"),
+    Column("around", "text", meaning="windows lie around its activity or its peak"),
 )
 
 #: Columns of ``vetoes.csv``.

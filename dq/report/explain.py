@@ -11,6 +11,7 @@ from dq.gps import gps_to_utc_text
 from dq.report.night_tables import NightTables, read_night
 from dq.report.one_time import Nearest, OneTime, Witness, look_at, rows_near
 from dq.segments import NS, seconds_text, to_ns, to_ns_array
+from dq.tables import kind_of
 
 _STATUS = {
     "analysed": "yes",
@@ -149,9 +150,11 @@ def _active_line(witness: Witness) -> str:
     row = witness.row
     target = "" if row.target == "all" else f" for {row.target}"
     association = "" if pd.isna(row.p_value) else f"association p = {row.p_value:.2g}; "
+    what = "peak" if row.around == "peak" else "activity"
+    measure = "SNR" if kind_of(row.channel) in ("transients", "product") else "ratio"
     return (
-        f"    {row.channel}{target}: SNR >= {row.snr_threshold:g} within "
-        f"{row.half_window_s:g} s of its activity; active at a random time with "
+        f"    {row.channel}{target}: {measure} >= {row.snr_threshold:g} within "
+        f"{row.half_window_s:g} s of its {what}; active at a random time with "
         f"probability {witness.chance:.3g}; {association}{row.safety}"
     )
 

@@ -10,6 +10,7 @@ from dq.cost import losing_vetoes, volume_sentence
 from dq.gps import gps_to_utc_text
 from dq.report.night_tables import NightTables, read_night
 from dq.segments import NS, seconds_text
+from dq.tables import kind_of
 from dq.writers import write_atomically
 
 PAGE = "index.html"
@@ -252,6 +253,14 @@ def _others(night: NightTables) -> pd.DataFrame:
     return night.witnesses[~night.witnesses["accepted"].fillna(False).astype(bool)]
 
 
+def _settings(row) -> str:
+    """Say what of a channel counts, and how far around it."""
+    slow = kind_of(row.channel) in ("motion", "fringe")
+    measure = "ratio" if slow else "SNR"
+    what = "peak" if row.around == "peak" else "activity"
+    return f"{measure} ≥ {row.snr_threshold:g}, {what} ± {row.half_window_s:g} s"
+
+
 def _witnesses(rows: pd.DataFrame) -> list[dict]:
     top = rows["significance"].max() if len(rows) else 1.0
     out = []
@@ -260,9 +269,8 @@ def _witnesses(rows: pd.DataFrame) -> list[dict]:
         out.append(
             {
                 "channel": row.channel,
-                "settings": f"SNR ≥ {row.snr_threshold:g}, ± {row.half_window_s:g} s"
-                if tested
-                else "–",
+                "target": _text(row.target),
+                "settings": _settings(row) if tested else "–",
                 "coincidences": row.coincidences if tested else "–",
                 "expected": f"{row.expected:.2f}" if tested else "–",
                 "significance": f"{row.significance:.1f}" if tested else "–",

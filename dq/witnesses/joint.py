@@ -15,6 +15,11 @@ from dq.witnesses.windows import FusedTime
 _GOLDEN = 0.6180339887498949
 
 
+#: What a window lies around. A long earthquake would take half a night with it if
+#: only its whole activity counted; a swing is as long as it lasts.
+ACTIVITY, PEAK = "activity", "peak"
+
+
 @dataclass(frozen=True)
 class Targets:
     """Strain transients that witnesses are sought for.
@@ -110,6 +115,14 @@ class Activity:
         end = np.maximum(end, start)
         return cls(start[order], end[order], peak[order], snr[order])
 
+    def around(self, what: str) -> Activity:
+        """Give the activity that windows lie around: all of it, or its peaks alone."""
+        if what == ACTIVITY:
+            return self
+        order = np.argsort(self.peak, kind="stable")
+        peak = self.peak[order]
+        return Activity(peak, peak, peak, self.snr[order])
+
 
 class Joint:
     """Targets on the joint time, laid end to end.
@@ -167,7 +180,7 @@ class Joint:
         return out
 
     def windows(self, activity: Activity, threshold: float, half_window_s: float):
-        """Give the union of windows around activity, on the line."""
+        """Give the union of windows around activity (or peaks), on the line."""
         low = np.empty(len(activity.start), dtype=np.int64)
         high = np.empty(len(activity.start), dtype=np.int64)
         found = fill_windows(

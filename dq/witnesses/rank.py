@@ -188,6 +188,7 @@ def _measured(whole: Combination, found: Combination, chance: Chance) -> dict:
     return {
         "snr_threshold": whole.threshold,
         "half_window_s": whole.half_window_s,
+        "around": whole.around,
         "coincidences": whole.coincidences,
         "expected": whole.expected,
         "significance": whole.significance,
@@ -208,7 +209,7 @@ def _window(channels: Channels, name: str, found: Combination, targets) -> dict:
     window = (0.0, found.half_window_s, found.half_window_s)
     if kind_of(name) == "transients":
         window = measured_window(
-            channels.activity(name),
+            channels.activity(name).around(found.around),
             targets.times,
             threshold=found.threshold,
             half_window_s=found.half_window_s,
@@ -259,7 +260,7 @@ def _suspicious(rows, channels: Channels, strain, verdicts) -> None:
             continue
         if verdicts[row["channel"]].safety == SAFE:
             continue
-        near = channels.activity(row["channel"])
+        near = channels.activity(row["channel"]).around(row["around"])
         half = round(row["half_window_s"] * 1e9)
         strong = near.snr >= row["snr_threshold"]
         windows = Segments.from_arrays(

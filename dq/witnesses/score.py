@@ -21,7 +21,7 @@ from dq.witnesses.chance import (
     clusters_expected,
     shifted_counts,
 )
-from dq.witnesses.joint import Activity, Joint, Targets
+from dq.witnesses.joint import ACTIVITY, PEAK, Activity, Joint, Targets
 from dq.witnesses.kernel import count_windows
 from dq.witnesses.windows import hits
 
@@ -43,7 +43,10 @@ class Combination:
 
     Attributes
     ----------
-    threshold, half_window_s : float
+    threshold : float
+    around : str
+        What the windows lie around: the channel's activity, or its peaks alone.
+    half_window_s : float
     coincidences, total : int
         Target transients in the windows, and in the joint time.
     expected : float
@@ -62,6 +65,7 @@ class Combination:
     """
 
     threshold: float
+    around: str
     half_window_s: float
     coincidences: int
     total: int
@@ -119,8 +123,8 @@ class Channels:
         self.tables = tables
         self.judged = judged
         self.settings = settings
-        halves = [round(h * NS) for h in settings.half_windows_s]
-        self.halves = np.array(halves, dtype=np.int64)
+        #: What windows lie around, and how far they reach beyond, s.
+        self.kinds = [(a, h) for a in (ACTIVITY, PEAK) for h in settings.half_windows_s]
 
     def activity(self, name: str) -> Activity:
         """Give a channel's activity."""
@@ -156,26 +160,13 @@ class Channels:
         ladder = np.full((len(names), max(map(len, ladders))), np.nan)
         for row, values in zip(ladder, ladders, strict=True):
             row[: len(values)] = values
-        shape = (*ladder.shape, len(self.halves))
-        counted = (*shape, len(joint.slid[0]), len(joint.counts))
-        dead = np.full(shape, -1, dtype=np.int64)
-        found = np.zeros(counted, dtype=np.int32)
-        met = np.zeros(counted, dtype=np.int32)
-        count_windows(
-            (
-                np.concatenate([a.start for a in active]),
-                np.concatenate([a.end for a in active]),
-                np.concatenate([a.snr for a in active]),
-            ),
-            np.append(0, np.cumsum([len(a.start) for a in active])),
-            ladder,
-            self.halves,
-            joint.segments,
-            joint.slid,
-            int(MOST_DEAD * joint.total),
-            (dead, found, met),
-        )
-        sober = _scores(joint, active, ladder, self.settings, dead, found, met)
+        halves = self.settings.half_windows_s
+        parts = [
+            _counted([a.around(what) for a in active], joint, ladder, halves)
+            for what in (ACTIVITY, PEAK)
+        ]
+        dead, found, met = (np.concatenate(x, axis=2) for x in zip(*parts, strict=True))
+        sober = _scores(joint, active, ladder, self.kinds, dead, found, met)
         if len(scores.loudest):
             highest = sober[..., 1:, :].max(axis=(0, 1, 2, 4))
             np.maximum(scores.loudest, highest, out=scores.loudest)
@@ -195,8 +186,8 @@ class Channels:
         tested = dead >= 0
         order = np.lexsort((cost[tested], -score[tested]))
         t, w = np.argwhere(tested)[order[0]]
-        threshold, half = float(ladder[t]), self.settings.half_windows_s[w]
-        low, high = joint.windows(activity, threshold, half)
+        threshold, (what, half) = float(ladder[t]), self.kinds[w]
+        low, high = joint.windows(activity.around(what), threshold, half)
         where = hits(joint.positions[m], low, high)
         expected = joint.counts[m] * dead[t, w] / joint.total
         count = int(found[t, w, 0, m])
@@ -204,6 +195,7 @@ class Channels:
         grouped = float(poisson_significance(met[t, w, 0, m], most))
         return Combination(
             threshold=threshold,
+            around=what,
             half_window_s=half,
             coincidences=count,
             total=int(joint.counts[m]),
@@ -218,14 +210,16 @@ class Channels:
             windows_hit=len(np.unique(where[where >= 0])),
         )
 
+    def _windows(self, joint: Joint, name: str, found: Combination):
+        activity = self.activity(name).around(found.around)
+        return joint.windows(activity, found.threshold, found.half_window_s)
+
     def measured(
         self, found: Combination, name: str, targets: Targets, analysed: Segments
     ) -> Combination:
         """Give a combination as it stands over all of some analysed time."""
         joint = Joint(targets, analysed & self.judged[name])
-        low, high = joint.windows(
-            self.activity(name), found.threshold, found.half_window_s
-        )
+        low, high = self._windows(joint, name, found)
         where = hits(joint.positions[0], low, high)
         inside = where >= 0
         dead, total = int(np.sum(high - low)), len(where)
@@ -250,9 +244,7 @@ class Channels:
     ) -> Combination:
         """Hold a combination against many more shifts; never raises its score."""
         joint = Joint(targets, analysed & self.judged[name])
-        low, high = joint.windows(
-            self.activity(name), found.threshold, found.half_window_s
-        )
+        low, high = self._windows(joint, name, found)
         shifted = shifted_counts(
             joint.positions[0], joint.first[0], low, high, joint.total
         )
@@ -267,7 +259,32 @@ def _most_clusters(joint: Joint, target: int, low, high) -> float:
     )
 
 
-def _scores(joint, active, ladder, settings, dead, found, met) -> np.ndarray:
+def _counted(active: list[Activity], joint: Joint, ladder, halves_s):
+    """Count the windows of some channels: dead time, hits, clusters met."""
+    halves = np.array([round(h * NS) for h in halves_s], dtype=np.int64)
+    shape = (*ladder.shape, len(halves))
+    counted = (*shape, len(joint.slid[0]), len(joint.counts))
+    dead = np.full(shape, -1, dtype=np.int64)
+    found = np.zeros(counted, dtype=np.int32)
+    met = np.zeros(counted, dtype=np.int32)
+    count_windows(
+        (
+            np.concatenate([a.start for a in active]),
+            np.concatenate([a.end for a in active]),
+            np.concatenate([a.snr for a in active]),
+        ),
+        np.append(0, np.cumsum([len(a.start) for a in active])),
+        ladder,
+        halves,
+        joint.segments,
+        joint.slid,
+        int(MOST_DEAD * joint.total),
+        (dead, found, met),
+    )
+    return dead, found, met
+
+
+def _scores(joint, active, ladder, kinds, dead, found, met) -> np.ndarray:
     """Give the score of every combination and shift, shape as ``found``."""
     share = np.where(dead >= 0, dead, 0) / joint.total
     expected = share[..., None, None] * joint.counts
@@ -288,9 +305,8 @@ def _scores(joint, active, ladder, settings, dead, found, met) -> np.ndarray:
     which, place = np.unique(combination, axis=1, return_inverse=True)
     most = np.empty(which.shape[1])
     for k, (c, t, w, m) in enumerate(which.T):
-        low, high_ = joint.windows(
-            active[c], float(ladder[c, t]), settings.half_windows_s[w]
-        )
+        what, half = kinds[w]
+        low, high_ = joint.windows(active[c].around(what), float(ladder[c, t]), half)
         most[k] = _most_clusters(joint, int(m), low, high_)
     grouped = poisson_significance(met[tuple(rows)], most[place.ravel()])
     sober[tuple(rows)] = np.minimum(plain[high], grouped)

@@ -141,7 +141,7 @@ def select(
 
 
 def _windows(channels: Channels, name: str, found: Combination) -> Segments:
-    activity = channels.activity(name)
+    activity = channels.activity(name).around(found.around)
     loud = activity.snr >= found.threshold
     half = round(found.half_window_s * NS)
     return Segments.from_arrays(activity.start[loud] - half, activity.end[loud] + half)

@@ -14,26 +14,29 @@ def veto_windows(
     before_s: float,
     after_s: float,
     delay_s: float = 0.0,
+    around: str = "activity",
 ) -> Segments:
     """Give the union of windows around a channel's activity above a threshold.
 
     Parameters
     ----------
     transients : pandas.DataFrame
-        Columns ``gps_start``, ``gps_end`` and ``snr``.
+        Columns ``gps_start``, ``gps_end`` (or ``gps_time``) and ``snr``.
     snr_threshold : float
     before_s, after_s : float
         A window is ``[gps_start - before, gps_end + after)``, moved by the delay.
     delay_s : float
         Strain minus channel, s.
+    around : str
+        ``activity``, or ``peak``: then start and end are the peak's time.
 
     Returns
     -------
     Segments
     """
     loud = transients["snr"].to_numpy(float) >= snr_threshold
-    starts = to_ns_array(transients["gps_start"].to_numpy(float)[loud])
-    ends = to_ns_array(transients["gps_end"].to_numpy(float)[loud])
+    names = ("gps_time", "gps_time") if around == "peak" else ("gps_start", "gps_end")
+    starts, ends = (to_ns_array(transients[c].to_numpy(float)[loud]) for c in names)
     delay = round(delay_s * NS)
     starts = starts + (delay - round(before_s * NS))
     ends = ends + (delay + round(after_s * NS))
@@ -67,6 +70,7 @@ def windows_of(witness, transients) -> Segments:
         before_s=known("before_s", half),
         after_s=known("after_s", half),
         delay_s=known("delay_s", 0.0),
+        around="peak" if getattr(witness, "around", None) == "peak" else "activity",
     )
 
 

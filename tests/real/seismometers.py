@@ -40,6 +40,7 @@ channels = "channels.csv"
 [witnesses]
 snr_thresholds = [7.0, 10.0]
 half_windows_s = [1.0, 2.0]
+slow_max_rate_hz = 0                # four minutes have no running level to rise above
 false_alarm_probability = 0.05
 
 [vetoes]
