@@ -1,0 +1,75 @@
+"""A night over many channels with one worker against two, alternating.
+
+``python tests/benchmarks/two_cores.py [--short]`` prints the wall time of the whole
+night and of its channels with ``--jobs`` 1 and 2, what a worker's start costs, and the
+ratios, each from the best of several runs.
+"""
+
+from __future__ import annotations
+
+import argparse
+import shutil
+import tempfile
+import time
+from pathlib import Path
+
+from many_channels import GPS, write_channels
+
+
+def start_up() -> float:
+    """Give the wall time until a worker has the engine loaded, s."""
+    from dq.night.pool import make_pool
+
+    begin = time.perf_counter()
+    with make_pool(1) as pool:
+        pool.submit(_load).result()
+    return time.perf_counter() - begin
+
+
+def _load() -> int:
+    import dq.night.channel
+
+    return len(dq.night.channel.__name__)
+
+
+def one_night(config: Path, out: Path, seconds: int, jobs: int) -> dict[str, float]:
+    """Run a night in a new folder; give its seconds by stage and in all."""
+    from dq.config import load_config
+    from dq.night.run import run_night
+
+    shutil.rmtree(out, ignore_errors=True)
+    begin = time.perf_counter()
+    outcome = run_night(
+        load_config(config), start=GPS, end=GPS + seconds, out=out, jobs=jobs
+    )
+    return outcome.seconds | {"all": time.perf_counter() - begin}
+
+
+def measure(*, channels=24, seconds=21632, rate=1024, rounds=3) -> dict[str, float]:
+    """Measure; see the module for what."""
+    best: dict[str, float] = {}
+    with tempfile.TemporaryDirectory() as name:
+        folder = Path(name)
+        config = write_channels(
+            folder / "site", rates=[rate] * channels, seconds=seconds, strain_rate=rate
+        )
+        one_night(config, folder / "out", 640, 2)  # compiles or loads the inner loops
+        for _ in range(rounds):
+            found = {"start": start_up()}
+            for jobs in (1, 2):
+                laps = one_night(config, folder / "out", seconds, jobs)
+                found |= {f"channels {jobs}": laps["channels"]}
+                found |= {f"night {jobs}": laps["all"]}
+            best = {k: min(v, best.get(k, v)) for k, v in found.items()}
+    for what in ("channels", "night"):
+        best[f"{what} ratio"] = best[f"{what} 1"] / best[f"{what} 2"]
+    return best
+
+
+if __name__ == "__main__":
+    parser = argparse.ArgumentParser(description=__doc__)
+    parser.add_argument("--short", action="store_true")
+    short = parser.parse_args().short
+    options = {"channels": 4, "seconds": 640, "rounds": 1} if short else {}
+    for name, value in measure(**options).items():
+        print(f"{name:16s} {value:8.2f}")
