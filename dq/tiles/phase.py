@@ -55,7 +55,7 @@ def tile_phase(
     off by dt turns the phase by 2 pi f dt, so the time belongs to it.
     """
     reach = np.sqrt(11.0) * frequency / q
-    if not 0 < frequency - reach or frequency + reach > 0.5 * sample_rate:
+    if frequency <= reach or frequency + reach > 0.5 * sample_rate:
         raise PlanError(
             f"the tile at {frequency:g} Hz and Q {q:g} reaches from "
             f"{frequency - reach:g} to {frequency + reach:g} Hz; it must lie within 0 "

@@ -58,7 +58,9 @@ def test_in_noise_the_phase_errs_by_one_over_rho():
         errors = []
         for _ in range(300):
             phase = rng.uniform(-np.pi, np.pi)
-            h = sine_gaussian(t, f0=150.0, q_burst=12 / np.sqrt(2), h_rss=1, phase=phase)
+            h = sine_gaussian(
+                t, f0=150.0, q_burst=12 / np.sqrt(2), h_rss=1, phase=phase
+            )
             x = rng.standard_normal(len(t)) + h * rho / np.sqrt(RATE)
             found, _ = tile_of(x, **place)
             errors.append(np.angle(np.exp(1j * (found - phase))))
