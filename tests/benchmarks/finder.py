@@ -10,9 +10,11 @@ from __future__ import annotations
 
 import os
 
-ONE_THREAD = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "NUMBA_NUM_THREADS")
 # before any library reads them
-os.environ.update(dict.fromkeys(ONE_THREAD, "1") | {"SSQ_PARALLEL": "0"})
+os.environ["OMP_NUM_THREADS"] = "1"
+os.environ["OPENBLAS_NUM_THREADS"] = "1"
+os.environ["NUMBA_NUM_THREADS"] = "1"
+os.environ["SSQ_PARALLEL"] = "0"
 
 import argparse
 import datetime
