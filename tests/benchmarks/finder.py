@@ -159,7 +159,7 @@ def cores_rows(short: bool) -> list[Row]:
     found = measure(**({"channels": 4, "seconds": 640, "rounds": 1} if short else {}))
     return [
         (
-            "two cores over one, 24 channels of 1024 Hz, channels / whole night",
+            "two cores over one, 24 channels of 1024 Hz x 6 h, channels / whole night",
             f"{found['channels ratio']:.2f} / {found['night ratio']:.2f} "
             f"({found['channels 1']:.1f}, {found['channels 2']:.1f} s; start of a "
             f"worker {found['start']:.1f} s; others {found['others 1']:.2f}, "
