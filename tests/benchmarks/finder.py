@@ -3,7 +3,7 @@
 ``python tests/benchmarks/finder.py [--short] [PART ...]`` runs the parts (all by
 default) and prints one Markdown table. Ratios are measured in alternation within one
 run. ``--short`` only checks that every part runs: its figures mean nothing. Parts:
-accuracy, noise, speed, cwt, cores, memory, night.
+accuracy, noise, speed, cwt, memory, night, cores.
 """
 
 from __future__ import annotations
@@ -163,7 +163,8 @@ def cores_rows(short: bool) -> list[Row]:
             f"{found['channels ratio']:.2f} / {found['night ratio']:.2f} "
             f"({found['channels 1']:.1f}, {found['channels 2']:.1f} s; start of a "
             f"worker {found['start']:.1f} s; others {found['others 1']:.2f}, "
-            f"{found['others 2']:.2f} processors)",
+            f"{found['others 2']:.2f} processors; CPU {found['cpu 1']:.1f}, "
+            f"{found['cpu 2']:.1f} s)",
             ">= 1.85",
         )
     ]
@@ -196,7 +197,7 @@ def night_rows(short: bool) -> list[Row]:
         (
             f"night of {n} channels x {h:g} h and a 16384 Hz strain, two workers",
             f"{laps['all']:.1f} s (channels {laps['channels']:.1f} s, others "
-            f"{laps['others']:.2f} processors)",
+            f"{laps['others']:.2f} processors; CPU {laps['cpu']:.1f} s)",
             "",
         )
         for (n, h), laps in found["runs"].items()
@@ -205,7 +206,7 @@ def night_rows(short: bool) -> list[Row]:
         (
             "extrapolated to 1000 channels x 24 h",
             f"{found['night h']:.2f} h (channels {found['channels h']:.2f} h, rest "
-            f"{found['rest h']:.2f} h)",
+            f"{found['rest h']:.2f} h); CPU time over two: {found['CPU h over two']:.2f} h",
             "<= 4 h",
         )
     )
@@ -217,9 +218,9 @@ PARTS = {
     "noise": noise_rows,
     "speed": speed_rows,
     "cwt": cwt_rows,
-    "cores": cores_rows,
     "memory": memory_rows,
     "night": night_rows,
+    "cores": cores_rows,
 }
 
 

@@ -4,7 +4,8 @@
 4096 Hz, 1024 Hz on average, compressed) and a strain of 16384 Hz over an hour, then
 half the channels, half the time and twice the time, and prints the seconds of each
 stage. The extrapolation to 1000 channels x 24 h takes the channels' stage as start-up,
-strain hours and channel hours, and the rest as a constant and channel hours.
+strain hours and channel hours, and the rest as a constant and channel hours; the CPU
+time, which other programs change little, as a constant, strain hours and channel hours.
 """
 
 from __future__ import annotations
@@ -51,6 +52,10 @@ def measure(*, runs=RUNS, strain_rate=16384, rounds=2, target=(1000, 24.0)) -> d
     terms = np.array([(1.0, k * t) for k, t in runs])
     (constant_s, rest_s), *_ = np.linalg.lstsq(terms, rest_all, rcond=None)
     rest = constant_s + rest_s * target[0] * target[1]
+    cpu = np.array([found[r]["cpu"] for r in runs])
+    terms = np.array([(1.0, t, k * t) for k, t in runs])
+    (cpu_s, *per_hour), *_ = np.linalg.lstsq(terms, cpu, rcond=None)
+    cpu_all = cpu_s + per_hour[0] * h + per_hour[1] * n * h
     channels = start + strain_s * h + channel_s * n * h
     return {
         "runs": found,
@@ -59,6 +64,7 @@ def measure(*, runs=RUNS, strain_rate=16384, rounds=2, target=(1000, 24.0)) -> d
         "channel hour s": float(channel_s),
         "channels h": float(channels) / 3600,
         "rest h": float(rest) / 3600,
+        "CPU h over two": float(cpu_all) / 3600 / 2,
         "night h": float(channels + rest) / 3600,
     }
 
