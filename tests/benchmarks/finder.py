@@ -142,7 +142,7 @@ def cwt_rows(short: bool) -> list[Row]:
         ours, theirs = found["tiles a second"], found[f"{name} a second"]
         rows.append(
             (
-                f"tiles a second over {name}'s coefficients (transformed tiles alone)",
+                f"tiles a second over coefficients of {name} (transformed tiles alone)",
                 f"{found[f'tiles over {name}']:.1f} "
                 f"({found[f'transformed over {name}']:.1f}); "
                 f"{ours / 1e6:.0f} / {theirs / 1e6:.0f} million",
@@ -206,7 +206,8 @@ def night_rows(short: bool) -> list[Row]:
         (
             "extrapolated to 1000 channels x 24 h",
             f"{found['night h']:.2f} h (channels {found['channels h']:.2f} h, rest "
-            f"{found['rest h']:.2f} h); CPU time over two: {found['CPU h over two']:.2f} h",
+            f"{found['rest h']:.2f} h); CPU time over two: "
+            f"{found['CPU h over two']:.2f} h",
             "<= 4 h",
         )
     )
