@@ -6,7 +6,7 @@ from decimal import Decimal
 
 import click
 
-from dq.cli.arguments import end_option, snr_option, start_option
+from dq.cli.arguments import GPS, end_option, snr_option, start_option
 from dq.cli.verb import Verb
 
 
@@ -28,6 +28,19 @@ from dq.cli.verb import Verb
     help="Write to FILE, .csv or .h5, instead of stdout.",
 )
 @snr_option
+@click.option(
+    "--picture",
+    default=None,
+    metavar="FILE",
+    help="Draw the tile energies of the range, at most 64 s, to FILE, .png.",
+)
+@click.option(
+    "--at",
+    type=GPS,
+    default=None,
+    metavar="GPS",
+    help="Draw the transient that is active at GPS, instead of the range.",
+)
 def command(
     config: str,
     channel: str,
@@ -35,6 +48,8 @@ def command(
     end: Decimal,
     out: str | None,
     snr: float | None,
+    picture: str | None,
+    at: Decimal | None,
 ) -> int:
     """Find the transients of CHANNEL in [start, end).
 
@@ -50,11 +65,24 @@ def command(
     target = None if out is None else Path(out)
     if target is not None:
         check_target(target)
+    if at is not None and picture is None:
+        raise click.UsageError("--at names the time of a picture; give --picture too")
+    if picture is not None:
+        from dq.night.picture import check_picture
+
+        check_picture(Path(picture), start, end, at)
 
     with log_to_stderr():
+        settings = load_config(config)
         result = find_in_channel(
-            load_config(config), channel, start=start, end=end, snr_threshold=snr
+            settings, channel, start=start, end=end, snr_threshold=snr
         )
+    if picture is not None:
+        from dq.night.picture import draw_found
+        from dq.writers.atomic import write_atomically
+
+        drawn = draw_found(settings, result, start=start, end=end, at=at)
+        write_atomically(Path(picture), drawn)
     if target is not None:
         write_found(target, result)
     else:

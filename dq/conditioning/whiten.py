@@ -114,6 +114,22 @@ def hann_lag(lag: np.ndarray, half_length: int) -> np.ndarray:
 TOGETHER = 2
 
 
+#: The ends of a transform fade in and out over this time, s: a line that breaks off
+#: rings over the whole band, most where the difference has made the noise small (own
+#: choice, within the settling time). Measured at 512 Hz: without it a line 10 000 times
+#: as high as the noise of 1 Hz raises transients at the seams, with it one 100 000
+#: times as high does not.
+TAPER_S = 0.5
+
+
+def taper_ends(values: np.ndarray, length: int) -> None:
+    """Fade both ends in place, as a raised cosine over ``length`` samples."""
+    length = min(length, len(values) // 2)
+    fade = np.sin(0.5 * np.pi * (np.arange(length) + 0.5) / max(length, 1)) ** 2
+    values[:length] *= fade
+    values[len(values) - length :] *= fade[::-1]
+
+
 def whitened_spectra(
     parts: list[tuple[np.ndarray, int, Whitening]],
     length: int,
@@ -150,7 +166,9 @@ def whitened_spectra(
         group = parts[first : first + TOGETHER]
         rows = np.zeros((2 * len(group), length))
         for k, (samples, offset, whitening) in enumerate(group):
-            rows[2 * k, offset + 1 : offset + len(samples) - 1] = difference(samples)
+            series = difference(samples)
+            taper_ends(series, round(TAPER_S * sample_rate))
+            rows[2 * k, offset + 1 : offset + len(samples) - 1] = series
             _place_taps(whitening.taps, rows[2 * k + 1])
         bins = scipy.fft.rfft(rows, axis=1, workers=1)
         for k in range(len(group)):

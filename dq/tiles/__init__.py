@@ -1,6 +1,7 @@
 """Multi-Q tiling: planned from a mismatch, computed by one inverse FFT per row."""
 
 from dq.tiles.climb import climb_from
+from dq.tiles.phase import tile_phase
 from dq.tiles.plan import TilePlan, band_weights, plan_tiles
 from dq.tiles.transform import TileRuns, row_coefficients, tile_runs
 
@@ -11,5 +12,6 @@ __all__ = [
     "climb_from",
     "plan_tiles",
     "row_coefficients",
+    "tile_phase",
     "tile_runs",
 ]

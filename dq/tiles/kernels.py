@@ -214,8 +214,8 @@ def single_tile(spectrum, samples, sample_rate, time_s, frequency, q):
     last = min(int(np.ceil((frequency + half_width) * length)), spectrum.shape[0])
     step = 2.0 * np.pi * time_s / length
     turn = complex(np.cos(step), np.sin(step))
-    # the phase is taken relative to the tile's own frequency, so that it is the
-    # signal's phase at the centre of the tile
+    # the phase is taken relative to the tile's own frequency: it is the signal's phase
+    # carried back to the transform's first sample
     phase = step * (first - frequency * length)
     factor = complex(np.cos(phase), np.sin(phase))
     total, norm = 0.0j, 0.0
