@@ -17,6 +17,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from dq.config import NEVER_VETOED
 from dq.counting import benjamini_hochberg
 from dq.segments import Segments, to_ns_array
 from dq.tables import WITNESSES, conform, kind_of, recordings_of
@@ -39,8 +40,6 @@ if TYPE_CHECKING:
 
     from dq.config import Witnesses
 
-#: Families that are no noise, or no family: never targets of their own.
-NO_TARGETS = ("chirp_like", "unknown", "unsorted")
 
 #: Shifted counts this many times wider than Poisson's are worth a word.
 _WIDE = 1.5
@@ -118,7 +117,7 @@ def make_targets(strain: pd.DataFrame, analysed: Segments, fewest: int) -> Targe
     names = ["all"]
     if "family" in strain:
         family = strain["family"].fillna("").to_numpy(object)
-        for name in sorted(set(family) - {"", *NO_TARGETS}):
+        for name in sorted(set(family) - {"", *NEVER_VETOED}):
             mine = family == name
             if mine.sum() >= fewest:
                 group[mine] = len(names) - 1

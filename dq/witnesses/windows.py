@@ -70,7 +70,7 @@ def windows_of(witness, transients) -> Segments:
         before_s=known("before_s", half),
         after_s=known("after_s", half),
         delay_s=known("delay_s", 0.0),
-        around="peak" if getattr(witness, "around", None) == "peak" else "activity",
+        around=str(getattr(witness, "around", "activity")),
     )
 
 
