@@ -54,13 +54,18 @@ def volume_sentence(volume: dict) -> str:
     return text
 
 
+#: A loss smaller than this share of volume x time is not worth a word: the loudness that
+#: it rests on is read off ten transients or so (own choice).
+SMALLEST_LOSS = 0.01
+
+
 def losing_vetoes(cost: pd.DataFrame) -> list[str]:
     """Say which vetoes the search is better off without, worst first.
 
     Faults are no choice and are not named.
     """
     rows = cost[cost["source"].fillna("").isin(["witness", "family"])]
-    worse = rows[rows["volume_time_unique"] < 1.0]
+    worse = rows[rows["volume_time_unique"] < 1.0 - SMALLEST_LOSS]
     worse = worse.sort_values("volume_time_unique", kind="stable")
     return [
         f"{row.veto} loses more than it gains: without it, and with all others, volume "

@@ -116,11 +116,17 @@ def facts(night: NightTables) -> list[tuple[str, str, str]]:
             f"{span(total['dead_time_s'])} of analysed time",
         ),
         (
-            f"{len(night.accepted())}",
+            f"{night.accepted()['channel'].nunique()}",
             "witnesses",
-            f"of {len(night.witnesses)} auxiliary channels",
+            _of_channels(night.witnesses["channel"].unique()),
         ),
     ]
+
+
+def _of_channels(names) -> str:
+    derived = sum("@" in name for name in names)
+    more = f" and {derived} derived" if derived else ""
+    return f"of {len(names) - derived}{more} channels"
 
 
 def _by_chance(total) -> str:
