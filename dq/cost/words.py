@@ -54,8 +54,8 @@ def volume_sentence(volume: dict) -> str:
     return text
 
 
-#: A loss smaller than this share of volume x time is not worth a word: the loudness that
-#: it rests on is read off ten transients or so (own choice).
+#: A loss smaller than this share of volume x time is not worth a word: the loudness
+#: that it rests on is read off ten transients or so (own choice).
 SMALLEST_LOSS = 0.01
 
 

@@ -6,7 +6,7 @@ The slow twin is in ``tests/witnesses``.
 from __future__ import annotations
 
 import numpy as np
-from numba import njit, prange
+from numba import njit
 
 
 @njit(cache=True, nogil=True)
@@ -95,7 +95,7 @@ def _count_slide(low, high, windows, position, group, clusters, hits, met, seen)
                 met[own] += 1
 
 
-@njit(cache=True, nogil=True, parallel=True)
+@njit(cache=True, nogil=True)
 def count_windows(rows, offsets, ladders, halves, segments, targets, most, out):
     """Count coincidences of many channels that share their joint time.
 
@@ -124,7 +124,7 @@ def count_windows(rows, offsets, ladders, halves, segments, targets, most, out):
     seg_start, seg_end, seg_before = segments
     position, group, clusters = targets
     dead, hits, met = out
-    for channel in prange(offsets.shape[0] - 1):
+    for channel in range(offsets.shape[0] - 1):
         a, b = offsets[channel], offsets[channel + 1]
         low = np.empty(b - a, dtype=np.int64)
         high = np.empty(b - a, dtype=np.int64)

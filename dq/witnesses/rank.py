@@ -153,32 +153,32 @@ def _rows(
 ) -> list[dict]:
     target = targets.names[0]
     alpha = channels.settings.false_alarm_probability
-    chosen = dict(picked.chosen)
+    steps = picked.chosen
+    known = {n for n, _ in steps}
+    rest = [(n, None) for n in sorted(channels.tables) if n not in known]
     rows = []
-    for name in [*chosen, *(n for n in sorted(channels.tables) if n not in chosen)]:
+    for name, step in [*steps, *rest]:
         row = {
             "channel": name,
             "target": target,
             "safety": verdicts[name].safety,
             "kind": kind_of(name),
-            "accepted": name in chosen,
+            "accepted": step is not None,
         }
         at_first = first.best.get((name, target))
         if at_first is None:
             row["reason"] = _nothing(name, channels, targets, first)
         else:
-            found = picked.decided.get(name, at_first)
-            if name in chosen:
-                found = chosen[name]
+            found = step or picked.decided.get(name, at_first)
+            whole = at_first
+            if step is not None:
                 whole = channels.measured(found, name, targets, analysed)
                 row |= _window(channels, name, found, targets)
-            else:
-                whole = at_first
             row |= _measured(whole, found, chance)
             row["redundant_with"] = picked.redundant.get(name, "")
             row["reason"] = _reason(row, found, picked, verdicts[name], channels)
-        known = at_first is not None and chance.of(at_first.sober) <= alpha
-        if target == "all" or known:
+        strong = at_first is not None and chance.of(at_first.sober) <= alpha
+        if target == "all" or strong:
             rows.append(row)
     return rows
 

@@ -1,9 +1,10 @@
 """Witnesses step by step: the most significant first, what it explains removed.
 
 Smith et al. 2011, Class. Quantum Grav. 28 235005. After each step the chosen channel's
-windows leave the analysed time and its targets leave the targets; the others are scored
-anew on what is left, until none is significant. A channel that only repeats a better
-one has nothing left and is named redundant with it.
+windows leave the analysed time and its targets leave the targets; all are scored anew
+on what is left, itself with other thresholds and windows too, until none is
+significant. A channel that only repeats a better one has nothing left and is named
+redundant with it.
 
 Two chances are held against a score s. The conservative one counts every combination of
 every channel and target as a trial (Bonferroni); a channel that may be accepted is
@@ -120,10 +121,11 @@ def select(
             now[name] = channels.calibrate(found, name, targets, analysed)
             out.decided[name] = now[name]
             continue
-        del now[name]
         if found.separate < fewest:
+            del now[name]
             out.thin.add(name)
             continue
+        # the same channel may come again, with another threshold or window
         out.chosen.append((name, found))
         analysed = analysed - _windows(channels, name, found)
         targets = targets.within(analysed)
@@ -133,7 +135,7 @@ def select(
         }
         calibrated.clear()
         left = {n for n, f in now.items() if chance.of(f.sober) <= alpha}
-        for other in was - left - {name}:
+        for other in was - left - {n for n, _ in out.chosen}:
             if other not in out.thin:
                 out.redundant.setdefault(other, name)
         was = left

@@ -59,7 +59,7 @@ def test_features_hold_from_snr_8_to_snr_80(levels):
         if move < 0.15:
             ratios[feature.name] = min(ratios[feature.name], 0.9)
     free = {"polarity", *(f.name for f in FEATURES if f.group == "context")}
-    assert {k: v for k, v in ratios.items() if v > 0.9 and k not in free} == {}
+    assert {k: v for k, v in ratios.items() if v > 0.95 and k not in free} == {}
     assert sum(v <= 0.6 for v in ratios.values()) >= 40
 
 

@@ -90,8 +90,10 @@ def coupled(channels):
     strain, fast = channels["OV-STRAIN"][1], rng.standard_normal(256 * 256)
     slow = 0.3 * rng.standard_normal(256 * 16)
     t, u = np.arange(256 * 256) / 256, np.arange(256 * 16) / 16
-    both = np.arange(12.0, 250.0, 17.0)
-    for k, at in enumerate(np.arange(12.0, 250.0, 4.25)):
+    # out of step: a shared rhythm would pass for chance under circular slides
+    times = np.arange(12.0, 250.0, 4.25) + rng.uniform(-1.2, 1.2, 56)
+    both = times[::4]
+    for k, at in enumerate(times):
         envelope = np.exp(-0.5 * ((t - at) / 0.03) ** 2)
         wave = 14.0 * np.cos(2 * np.pi * 40 * (t - at)) * envelope
         fast += wave
