@@ -28,8 +28,9 @@ GROUP = 8
 WIDTHS = (1, 4, 16)
 
 #: Chance of noise to reach the bound in one cell. With neighbours left out too, three
-#: widths take one cell in a hundred, which lowers the spectrum by half a percent.
-CHANCE = 1e-3
+#: widths take one cell in two hundred, which lowers the spectrum by a fifth of a
+#: percent.
+CHANCE = 3e-4
 
 #: Share of disturbed segments from which on a band keeps all of them.
 MOST = 0.4
@@ -51,7 +52,7 @@ def cell_bound(bins: int, correlated: float) -> float:
     Examples
     --------
     >>> round(cell_bound(1, 1.0), 3)
-    6.908
+    8.112
     """
     from scipy.special import gammainccinv
 

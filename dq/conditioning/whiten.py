@@ -21,8 +21,18 @@ from numba import njit
 
 def difference(values: np.ndarray) -> np.ndarray:
     """Give the second central difference; two samples shorter than the input."""
-    values = np.asarray(values, dtype=np.float64)
-    return 2.0 * values[1:-1] - values[:-2] - values[2:]
+    values = np.asarray(values)
+    out = np.empty(max(len(values) - 2, 0))
+    fill_difference(values, out)
+    return out
+
+
+@njit(cache=True, nogil=True)
+def fill_difference(values, out):
+    """Fill ``out`` with the second central difference, in double precision."""
+    for k in range(out.shape[0]):
+        middle = np.float64(values[k + 1])
+        out[k] = 2.0 * middle - np.float64(values[k]) - np.float64(values[k + 2])
 
 
 def difference_response(frequency: np.ndarray, sample_rate: float) -> np.ndarray:
@@ -136,6 +146,7 @@ def whitened_spectra(
     *,
     sample_rate: float,
     out: np.ndarray | None = None,
+    work: np.ndarray | None = None,
 ) -> np.ndarray:
     """Transform and whiten the samples of several blocks.
 
@@ -152,6 +163,8 @@ def whitened_spectra(
         Hz.
     out : ndarray of complex64, optional
         Where the result goes; new by default.
+    work : ndarray of float64, shape (2 * TOGETHER, length), optional
+        Memory to work in; fresh pages would cost as much as zeroing them.
 
     Returns
     -------
@@ -161,14 +174,19 @@ def whitened_spectra(
     """
     if out is None:
         out = np.empty((len(parts), length // 2 + 1), dtype=np.complex64)
+    if work is None:
+        work = np.empty((2 * min(TOGETHER, len(parts)), length))
     scale = np.sqrt(2.0 / (sample_rate * length))
     for first in range(0, len(parts), TOGETHER):
         group = parts[first : first + TOGETHER]
-        rows = np.zeros((2 * len(group), length))
+        rows = work[: 2 * len(group)]
         for k, (samples, offset, whitening) in enumerate(group):
-            series = difference(samples)
-            taper_ends(series, round(TAPER_S * sample_rate))
-            rows[2 * k, offset + 1 : offset + len(samples) - 1] = series
+            begin, end = offset + 1, offset + len(samples) - 1
+            row = rows[2 * k]
+            row[:begin] = 0.0
+            row[end:] = 0.0
+            fill_difference(samples, row[begin:end])
+            taper_ends(row[begin:end], round(TAPER_S * sample_rate))
             _place_taps(whitening.taps, rows[2 * k + 1])
         bins = scipy.fft.rfft(rows, axis=1, workers=1)
         for k in range(len(group)):
@@ -190,10 +208,12 @@ def whitened_spectrum(
 
 
 def _place_taps(taps: np.ndarray, row: np.ndarray) -> None:
-    """Lay symmetric taps around the start of a longer, periodic row of zeros."""
+    """Lay symmetric taps around the start of a longer, periodic row, else zero."""
     half = len(taps) // 2
+    end = len(row) - (len(taps) - half)
     row[:half] = taps[:half]
-    row[len(row) - (len(taps) - half) :] = taps[half:]
+    row[half:end] = 0.0
+    row[end:] = taps[half:]
 
 
 @njit(cache=True, nogil=True)

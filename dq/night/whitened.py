@@ -8,7 +8,12 @@ from __future__ import annotations
 
 import numpy as np
 
-from dq.conditioning.whiten import Whitening, design_whitening, whitened_spectra
+from dq.conditioning.whiten import (
+    TOGETHER,
+    Whitening,
+    design_whitening,
+    whitened_spectra,
+)
 from dq.config import Config
 from dq.night.blocks import BlockPlan
 from dq.night.fault_log import FaultLog
@@ -47,6 +52,7 @@ class WhitenedBlocks:
             span_ns=round(settings.spectrum_span_s * _NS),
         )
         self.faults = FaultLog()
+        self._work: np.ndarray | None = None
         segment_ns = round(plan.segment / plan.rate * _NS)
         reach = self.frames.span_ns + self.frames.frame_ns + segment_ns
         self.margin_ns = max(plan.pad_ns + segment_ns, reach_ns)
@@ -97,8 +103,11 @@ class WhitenedBlocks:
 
     def whiten(self, parts: list, out: np.ndarray | None = None) -> np.ndarray:
         """Give the whitened spectra of blocks, shape (n_parts, n_bins)."""
+        length = self.plan.tiles.samples
+        if self._work is None:
+            self._work = np.empty((2 * TOGETHER, length))
         return whitened_spectra(
-            parts, self.plan.tiles.samples, sample_rate=self.plan.rate, out=out
+            parts, length, sample_rate=self.plan.rate, out=out, work=self._work
         )
 
     def transform(
