@@ -208,5 +208,10 @@ def _seen(found: OneTime) -> str:
         return "the night has no witness"
     if not found.active:
         return "no witness was active"
-    parts = [f"{w.row.channel} ({w.chance:.2g} by chance)" for w in found.active]
-    return f"active then: {', '.join(dict.fromkeys(parts))}"
+    # a channel may be active at several settings; the rarest says most
+    rarest: dict[str, float] = {}
+    for witness in found.active:
+        name = witness.row.channel
+        rarest[name] = min(witness.chance, rarest.get(name, 1.0))
+    parts = [f"{name} ({chance:.2g} by chance)" for name, chance in rarest.items()]
+    return f"active then: {', '.join(parts)}"
