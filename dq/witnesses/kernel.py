@@ -68,35 +68,59 @@ def fill_windows(
 
 
 @njit(cache=True, nogil=True)
+def _first_from(position, at, time):
+    """Give the first position at or after a time, searching on from ``at``."""
+    size = position.shape[0]
+    step, low = 1, at
+    while low + step < size and position[low + step] < time:
+        low += step
+        step *= 2
+    high = min(low + step, size)
+    while low < high:
+        middle = (low + high) // 2
+        if position[middle] < time:
+            low = middle + 1
+        else:
+            high = middle
+    return low
+
+
+@njit(cache=True, nogil=True)
 def _count_slide(low, high, windows, position, group, clusters, hits, met, seen):
     """Count targets and clusters inside windows, for all targets and each group.
 
     ``hits``, ``met`` have one entry for all and one per group; ``clusters`` holds a
-    target's cluster among all and within its group.
+    target's cluster among all and within its group. Few windows leap from one to the
+    next, many walk along the targets: both visit the same ones in the same order.
     """
     seen[:] = -1
-    at = 0
-    for j in range(position.shape[0]):
-        while at < windows and high[at] <= position[j]:
-            at += 1
-        if at == windows:
+    size = position.shape[0]
+    leaps = 4 * windows < size
+    j = 0
+    for k in range(windows):
+        if leaps:
+            j = _first_from(position, j, low[k])
+        else:
+            while j < size and position[j] < low[k]:
+                j += 1
+        while j < size and position[j] < high[k]:
+            hits[0] += 1
+            if clusters[j, 0] != seen[0]:
+                seen[0] = clusters[j, 0]
+                met[0] += 1
+            own = group[j] + 1
+            if own > 0:
+                hits[own] += 1
+                if clusters[j, 1] != seen[own]:
+                    seen[own] = clusters[j, 1]
+                    met[own] += 1
+            j += 1
+        if j == size:
             break
-        if low[at] > position[j]:
-            continue
-        hits[0] += 1
-        if clusters[j, 0] != seen[0]:
-            seen[0] = clusters[j, 0]
-            met[0] += 1
-        own = group[j] + 1
-        if own > 0:
-            hits[own] += 1
-            if clusters[j, 1] != seen[own]:
-                seen[own] = clusters[j, 1]
-                met[own] += 1
 
 
 @njit(cache=True, nogil=True)
-def count_windows(rows, offsets, ladders, halves, segments, targets, most, out):
+def count_windows(rows, offsets, ladders, halves, below, segments, targets, most, out):
     """Count coincidences of many channels that share their joint time.
 
     Parameters
@@ -109,6 +133,8 @@ def count_windows(rows, offsets, ladders, halves, segments, targets, most, out):
         Not a number where a channel's ladder is shorter.
     halves : ndarray of int64, shape (n_windows,)
         Nanoseconds.
+    below : ndarray of int64, shape (n_channels,)
+        Only half-windows shorter than this are tried for a channel, nanoseconds.
     segments : tuple of ndarray of int64
         Start, end and time before of the joint segments.
     targets : tuple of ndarray
@@ -132,15 +158,14 @@ def count_windows(rows, offsets, ladders, halves, segments, targets, most, out):
         before = -1
         for t in range(ladders.shape[1]):
             threshold = ladders[channel, t]
-            loud = 0
-            for i in range(a, b):
-                if snr[i] >= threshold:
-                    loud += 1
+            loud = np.sum(snr[a:b] >= threshold)
             # a threshold that leaves the same rows is no test of its own
             if loud == 0 or loud == before:
                 continue
             before = loud
             for w in range(halves.shape[0]):
+                if halves[w] >= below[channel]:
+                    continue
                 windows = fill_windows(
                     start[a:b],
                     end[a:b],
@@ -153,9 +178,7 @@ def count_windows(rows, offsets, ladders, halves, segments, targets, most, out):
                     low,
                     high,
                 )
-                total = 0
-                for k in range(windows):
-                    total += high[k] - low[k]
+                total = np.sum(high[:windows] - low[:windows])
                 if total == 0 or total > most:
                     continue
                 dead[channel, t, w] = total

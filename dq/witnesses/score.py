@@ -161,9 +161,10 @@ class Channels:
         for row, values in zip(ladder, ladders, strict=True):
             row[: len(values)] = values
         halves = self.settings.half_windows_s
+        below = [np.full(len(active), np.iinfo(np.int64).max), _mean_lengths(active)]
         parts = [
-            _counted([a.around(what) for a in active], joint, ladder, halves)
-            for what in (ACTIVITY, PEAK)
+            _counted([a.around(what) for a in active], joint, ladder, halves, limit)
+            for what, limit in zip((ACTIVITY, PEAK), below, strict=True)
         ]
         dead, found, met = (np.concatenate(x, axis=2) for x in zip(*parts, strict=True))
         sober = _scores(joint, active, ladder, self.kinds, dead, found, met)
@@ -259,7 +260,17 @@ def _most_clusters(joint: Joint, target: int, low, high) -> float:
     )
 
 
-def _counted(active: list[Activity], joint: Joint, ladder, halves_s):
+def _mean_lengths(active: list[Activity]) -> np.ndarray:
+    """Give each channel's mean length of activity, nanoseconds.
+
+    Half-windows at least as long hold the same around the activity and around its
+    peaks, and only the former is tried.
+    """
+    lengths = [int((a.end - a.start).mean()) if len(a.start) else 0 for a in active]
+    return np.array(lengths, dtype=np.int64)
+
+
+def _counted(active: list[Activity], joint: Joint, ladder, halves_s, below):
     """Count the windows of some channels: dead time, hits, clusters met."""
     halves = np.array([round(h * NS) for h in halves_s], dtype=np.int64)
     shape = (*ladder.shape, len(halves))
@@ -276,6 +287,7 @@ def _counted(active: list[Activity], joint: Joint, ladder, halves_s):
         np.append(0, np.cumsum([len(a.start) for a in active])),
         ladder,
         halves,
+        below,
         joint.segments,
         joint.slid,
         int(MOST_DEAD * joint.total),

@@ -70,6 +70,7 @@ def test_counting_equals_its_slow_twin(rng):
         np.append(0, np.cumsum([len(a.start) for a in active])),
         ladder,
         halves,
+        np.full(3, HOUR * NS),
         joint.segments,
         joint.slid,
         joint.total,
