@@ -8,7 +8,7 @@ import pytest
 PACKAGE = Path(__file__).parents[1] / "dq"
 
 #: Ground that every stage stands on, lowest first.
-GROUND = ("errors", "segments", "config", "tables", "counting", "gps")
+GROUND = ("errors", "segments", "config", "tables", "counting", "gps", "chirp")
 
 #: The stages in flow order.
 STAGES = (
@@ -36,6 +36,7 @@ MAY_IMPORT = {
     "tables": set(),
     "counting": set(),
     "gps": set(),
+    "chirp": set(),
     "store": set(),
     "conditioning": set(),
     "tiles": set(),
@@ -97,6 +98,7 @@ OWNERS = {
 
 #: Parts that are mathematics: arrays and tables in, arrays and tables out.
 MATHEMATICS = (
+    "chirp",
     "counting",
     "segments",
     "conditioning",

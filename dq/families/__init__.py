@@ -7,15 +7,7 @@ on, ``replant`` and ``guard`` add examples, ``validation`` and ``curves`` measur
 
 from dq.families.drift import drift, drift_text
 from dq.families.groups import time_groups
-from dq.families.guard import (
-    CHIRP_LIKE,
-    UNKNOWN,
-    UNSORTED,
-    chirp_waveform,
-    draw_chirps,
-    never_noise,
-    veto_targets,
-)
+from dq.families.guard import CHIRP_LIKE, UNKNOWN, UNSORTED, draw_chirps
 from dq.families.labels import labeller_agreement, match_labels
 from dq.families.model_store import load_model, save_model, sort_transients
 from dq.families.proposals import group_unknowns
@@ -29,7 +21,6 @@ __all__ = [
     "UNSORTED",
     "FamilySorter",
     "TrainingReport",
-    "chirp_waveform",
     "cut_snippet",
     "draw_chirps",
     "draw_snrs",
@@ -40,10 +31,8 @@ __all__ = [
     "load_model",
     "make_report",
     "match_labels",
-    "never_noise",
     "replant",
     "save_model",
     "sort_transients",
     "time_groups",
-    "veto_targets",
 ]

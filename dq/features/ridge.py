@@ -9,12 +9,10 @@ from __future__ import annotations
 
 import numpy as np
 
+from dq.chirp import SOLAR_MASS_S
 from dq.features.grouped import line_fit, moments, parabola_fit, ratio, total
 from dq.features.scene import Scene
 from dq.features.spec import group_of
-
-#: G M_sun / c^3, s.
-SOLAR_MASS_S = 4.925490947e-6
 
 #: Largest chirp mass that is told apart, solar masses: beyond lies no inspiral in band.
 MASS_LIMIT = 500.0

@@ -9,18 +9,13 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
+from dq.chirp import last_orbit_frequency
 from dq.config import Config
 from dq.families import draw_chirps
-from dq.families.guard import (
-    chirp_frequency,
-    chirp_mass,
-    last_orbit_frequency,
-    time_to_coalescence,
-)
 from dq.features import NAMES
 from dq.night.channel import ChannelResult, analyse_channel
 from dq.night.planting import NEAR_S, PlantedData, is_new, plan_runs, scaled
-from dq.night.signals import LONGEST_S, Signal
+from dq.night.signals import Signal, chirp_signal
 from dq.night.strain_features import measure_transients
 from dq.segments import Segments
 
@@ -101,14 +96,17 @@ def _draw(time_ns: int, rng: np.random.Generator, found: ChannelResult) -> Signa
     """Draw a chirp that ends within 8 s of a time."""
     time_ns += int(rng.integers(-8_000_000_000, 8_000_000_000))
     (first, second, phase), *_ = draw_chirps(1, rng=rng)
-    mass = float(chirp_mass(first, second))
     snr = float(np.exp(rng.uniform(*np.log(SNR_RANGE))))
+    # the last octaves hold most of the energy, and all of what is heard as a sweep
     last = min(float(last_orbit_frequency(first, second)), 0.9 * found.f_high_hz)
-    start = max(found.f_low_hz, 0.2 * last)
-    before = min(float(time_to_coalescence(start, mass=mass)), LONGEST_S)
-    start = max(start, float(chirp_frequency(before, mass=mass)))
-    before = float(time_to_coalescence(start, mass=mass))
-    return Signal(time_ns, "chirp", snr, start, mass, last, phase, before, 0.0)
+    return chirp_signal(
+        time_ns,
+        (first, second),
+        phase=phase,
+        snr=snr,
+        low_hz=max(found.f_low_hz, 0.2 * last),
+        high_hz=found.f_high_hz,
+    )
 
 
 def _theirs(table: pd.DataFrame, signals: list[Signal], before: pd.DataFrame):

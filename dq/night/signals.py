@@ -11,11 +11,15 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from dq.chirp import (
+    chirp_angle,
+    chirp_frequency,
+    chirp_mass,
+    last_orbit_frequency,
+    time_to_coalescence,
+)
 from dq.conditioning.spectrum import median_mean, periodograms
 from dq.conditioning.whiten import difference
-
-#: G M_sun / c^3, s (IAU 2015 nominal solar mass parameter over c^3).
-SOLAR_MASS_S = 4.925490947e-6
 
 #: Longest inspiral that is planted, s: heavier pairs than neutron stars from 10 Hz.
 LONGEST_S = 4.0
@@ -62,27 +66,18 @@ class Signal:
         return self._chirp(time_s)
 
     def _chirp(self, time_s: np.ndarray) -> np.ndarray:
-        """Give f^(2/3) cos(phase), f = (5 / 256 tau)^(3/8) (G Mc / c^3)^(-5/8) / pi.
-
-        Peters & Mathews 1963, Phys. Rev. 131 435, in the usual leading-order form.
-        """
-        mass = self.second * SOLAR_MASS_S
-        last_s = _remaining(self.last_hz, mass)
+        """Give f^(2/3) cos(phase) by the leading-order law, cut off at ``last_hz``."""
+        last_s = time_to_coalescence(self.last_hz, mass=self.second)
         tau = -np.asarray(time_s, dtype=np.float64)
         inside = (tau <= self.before_s) & (tau >= last_s)
         tau = np.clip(tau, last_s, self.before_s)
-        frequency = (5.0 / (256.0 * tau)) ** 0.375 * mass**-0.625 / np.pi
-        angle = self.phase - 2.0 * (tau / (5.0 * mass)) ** 0.625
+        frequency = chirp_frequency(tau, mass=self.second)
+        angle = self.phase + chirp_angle(tau, mass=self.second)
         # it sets in over four cycles, so that its start is no click
         ramp = np.clip((self.before_s - tau) * self.first_hz / 4.0, 0.0, 1.0)
         fade = np.sin(0.5 * np.pi * ramp) ** 2
         rise = (frequency / self.last_hz) ** (2.0 / 3.0)
         return inside * fade * rise * np.cos(angle)
-
-
-def _remaining(frequency_hz: float, mass_s: float) -> float:
-    """Give the time from a frequency to coalescence, s."""
-    return 5.0 / 256.0 * (np.pi * frequency_hz) ** (-8.0 / 3.0) * mass_s ** (-5.0 / 3.0)
 
 
 def draw_signal(
@@ -109,17 +104,32 @@ def draw_signal(
             time_ns, "burst", snr, frequency, q, frequency, phase, reach, reach
         )
     masses = np.exp(rng.uniform(np.log(5.0), np.log(40.0), 2))
-    total = float(masses.sum())
-    chirp_mass = float(masses.prod() ** 0.6 / total**0.2)
-    # the innermost stable orbit's frequency, or the end of the band
-    last = 1.0 / (6.0**1.5 * np.pi * total * SOLAR_MASS_S)
-    last = min(last, 0.9 * high_hz)
-    mass_s = chirp_mass * SOLAR_MASS_S
-    before = min(_remaining(low_hz, mass_s), LONGEST_S)
-    first = (5.0 / (256.0 * before)) ** 0.375 * mass_s**-0.625 / np.pi
-    first = float(min(first, 0.8 * last))
-    before = _remaining(first, mass_s)
-    return Signal(time_ns, "chirp", snr, first, chirp_mass, last, phase, before, 0.0)
+    return chirp_signal(
+        time_ns, masses, phase=phase, snr=snr, low_hz=low_hz, high_hz=high_hz
+    )
+
+
+def chirp_signal(
+    time_ns: int, masses, *, phase: float, snr: float, low_hz: float, high_hz: float
+) -> Signal:
+    """Give a chirp that sets in at ``low_hz``, or ``LONGEST_S`` before it ends.
+
+    Parameters
+    ----------
+    time_ns : int
+        Coalescence.
+    masses : sequence of two floats
+        Solar masses. It ends at the innermost stable orbit or at the end of the band.
+    phase, snr : float
+    low_hz, high_hz : float
+        Band that is searched, Hz.
+    """
+    mass = float(chirp_mass(*masses))
+    last = min(float(last_orbit_frequency(*masses)), 0.9 * high_hz)
+    before = min(float(time_to_coalescence(low_hz, mass=mass)), LONGEST_S)
+    first = float(min(chirp_frequency(before, mass=mass), 0.8 * last))
+    before = float(time_to_coalescence(first, mass=mass))
+    return Signal(time_ns, "chirp", snr, first, mass, last, phase, before, 0.0)
 
 
 def optimal_snr(

@@ -4,12 +4,13 @@ import numpy as np
 import pytest
 from small_site import SITE_SECONDS, SITE_START
 
+from dq.chirp import SOLAR_MASS_S
 from dq.config import load_config
 from dq.night import run_night, veto_again
 from dq.night.find import find_in_channel
 from dq.night.inputs import read_inputs
 from dq.night.planting import SPACING_S, PlantedData, plan_runs, plant_signals
-from dq.night.signals import SOLAR_MASS_S, Signal, draw_signal, optimal_snr
+from dq.night.signals import Signal, draw_signal, optimal_snr
 from dq.segments import NS, Segments
 from dq.tables import PLANTED, csv_table
 

@@ -21,9 +21,9 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
+from dq.chirp import chirp_mass, chirp_waveform, time_to_coalescence
 from dq.config import load_config
-from dq.families import CHIRP_LIKE, chirp_waveform, draw_chirps
-from dq.families.guard import chirp_mass, time_to_coalescence
+from dq.families import CHIRP_LIKE, draw_chirps
 from dq.features import NAMES
 from dq.night.copies import measure_copies
 from dq.night.find import find_in_channel
