@@ -11,7 +11,7 @@ from dq.families.guard import CHIRP_LIKE, UNKNOWN, UNSORTED, draw_chirps
 from dq.families.labels import labeller_agreement, match_labels
 from dq.families.model_store import load_model, save_model, sort_transients
 from dq.families.proposals import group_unknowns
-from dq.families.replant import cut_snippet, draw_snrs, replant
+from dq.families.replant import draw_snrs, faded_snippet, replant
 from dq.families.report import TrainingReport, make_report
 from dq.families.sorter import FamilySorter
 
@@ -21,11 +21,11 @@ __all__ = [
     "UNSORTED",
     "FamilySorter",
     "TrainingReport",
-    "cut_snippet",
     "draw_chirps",
     "draw_snrs",
     "drift",
     "drift_text",
+    "faded_snippet",
     "group_unknowns",
     "labeller_agreement",
     "load_model",

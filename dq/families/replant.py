@@ -15,7 +15,7 @@ import numpy as np
 LARGEST_SHARE = 0.5
 
 
-def cut_snippet(
+def faded_snippet(
     white: np.ndarray, *, centre: int, half: int, taper: int
 ) -> tuple[np.ndarray, np.ndarray]:
     """Cut a whitened stretch around an example and fade its ends.
@@ -69,7 +69,7 @@ def replant(
     Parameters
     ----------
     snippet, fade : ndarray, shape (m,)
-        From :func:`cut_snippet`.
+        From :func:`faded_snippet`.
     noise : ndarray, shape (n,)
         Whitened noise without a transient near the place.
     at : int

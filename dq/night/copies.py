@@ -13,7 +13,7 @@ import numpy as np
 import pandas as pd
 
 from dq.config import Config
-from dq.families import draw_snrs, replant
+from dq.families import draw_snrs, faded_snippet, replant
 from dq.features import NAMES, Snippet, measure
 from dq.features.snippets import LENGTHS_S, MARGIN_S
 from dq.night.strain_features import BlockCutter, FeaturePass, low_edge, walk
@@ -87,18 +87,10 @@ class CopyPass(FeaturePass):
 
 
 def _copy(snippet: Snippet, noise: np.ndarray, parent: float, snr: float) -> Snippet:
+    half = len(snippet.values) // 2
     taper = round(0.5 * MARGIN_S * snippet.sample_rate)
-    fade = np.ones(len(snippet.values))
-    rise = 0.5 - 0.5 * np.cos(np.pi * (np.arange(taper) + 0.5) / taper)
-    fade[:taper], fade[-taper:] = rise, rise[::-1]
-    values = replant(
-        snippet.values * fade,
-        fade,
-        noise,
-        at=len(noise) // 2,
-        parent_snr=parent,
-        snr=snr,
-    )
+    own, fade = faded_snippet(snippet.values, centre=half, half=half, taper=taper)
+    values = replant(own, fade, noise, at=half, parent_snr=parent, snr=snr)
     return replace(snippet, values=values.astype(np.float32), flat_s=0.0)
 
 

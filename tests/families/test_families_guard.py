@@ -7,7 +7,7 @@ from scipy import signal, stats
 from dq import chirp as law
 from dq.config import NEVER_VETOED
 from dq.families import guard
-from dq.families.replant import cut_snippet, draw_snrs, replant
+from dq.families.replant import draw_snrs, faded_snippet, replant
 from dq.observatory import waveforms
 
 
@@ -94,7 +94,7 @@ def test_a_replanted_burst_has_the_asked_snr(rng):
     white = rng.normal(size=8192)
     white[4096 - 512 : 4096 + 512] += 40.0 * wave
     parent = white[4096 - 512 : 4096 + 512] @ wave
-    snippet, fade = cut_snippet(white, centre=4096, half=512, taper=64)
+    snippet, fade = faded_snippet(white, centre=4096, half=512, taper=64)
     outputs = []
     for _ in range(200):
         noise = rng.normal(size=4096)
@@ -108,7 +108,7 @@ def test_a_replanted_burst_has_the_asked_snr(rng):
 
 def test_replanting_keeps_the_noise_at_unit_variance(rng):
     white = rng.normal(size=200_000)
-    snippet, fade = cut_snippet(white, centre=50_000, half=40_000, taper=8_000)
+    snippet, fade = faded_snippet(white, centre=50_000, half=40_000, taper=8_000)
     out = replant(
         snippet, fade, rng.normal(size=100_000), at=50_000, parent_snr=20.0, snr=10.0
     )
@@ -119,13 +119,13 @@ def test_replanting_keeps_the_noise_at_unit_variance(rng):
 def test_what_cannot_be_replanted_is_refused(rng):
     white = rng.normal(size=1000)
     with pytest.raises(ValueError, match="leave the data"):
-        cut_snippet(white, centre=10, half=100, taper=10)
+        faded_snippet(white, centre=10, half=100, taper=10)
     with pytest.raises(ValueError, match="taper"):
-        cut_snippet(white, centre=500, half=100, taper=101)
+        faded_snippet(white, centre=500, half=100, taper=101)
     holed = np.where(np.arange(1000) == 480, np.nan, white)
     with pytest.raises(ValueError, match="missing"):
-        cut_snippet(holed, centre=500, half=100, taper=10)
-    snippet, fade = cut_snippet(white, centre=500, half=100, taper=10)
+        faded_snippet(holed, centre=500, half=100, taper=10)
+    snippet, fade = faded_snippet(white, centre=500, half=100, taper=10)
     with pytest.raises(ValueError, match=r"at most 0\.5"):
         replant(snippet, fade, white, at=500, parent_snr=10.0, snr=6.0)
     with pytest.raises(ValueError, match="does not fit"):
