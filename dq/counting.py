@@ -107,19 +107,3 @@ def clopper_pearson(
     low = 0.0 if count == 0 else betaincinv(count, trials - count + 1, tail)
     high = 1.0 if count == trials else betaincinv(count + 1, trials - count, 1.0 - tail)
     return float(low), float(high)
-
-
-def benjamini_hochberg(p: np.ndarray) -> np.ndarray:
-    """Give the false-discovery rate at which each test would be called.
-
-    Notes
-    -----
-    Benjamini & Hochberg 1995, J. R. Stat. Soc. B 57 289.
-    """
-    p = np.asarray(p, float)
-    order = np.argsort(p, kind="stable")
-    scaled = p[order] * len(p) / np.arange(1, len(p) + 1)
-    rising = np.minimum.accumulate(scaled[::-1])[::-1]
-    out = np.empty(len(p))
-    out[order] = np.minimum(rising, 1.0)
-    return out

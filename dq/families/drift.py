@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
-from dq.counting import benjamini_hochberg, binomial_chance
+from dq.counting import binomial_chance
 from dq.families.sorter import FamilySorter
 
 #: False-discovery rate among the features (common practice).
@@ -41,6 +41,8 @@ def drift(features: pd.DataFrame, sorter: FamilySorter) -> pd.DataFrame:
     Monahan 2011, Numerical Methods of Statistics). Transients of one epoch are alike
     and not independent, so ``moved`` also asks for an effect of 0.15.
     """
+    from scipy.stats import false_discovery_control
+
     columns = ["feature", "distance", "shift", "p_value", "q_value", "moved"]
     X = features.to_numpy(float)
     said = sorter.decide(features)["family"].to_numpy(object)
@@ -58,7 +60,7 @@ def drift(features: pd.DataFrame, sorter: FamilySorter) -> pd.DataFrame:
         shift = _median(X[known, j]) - _median(sorter.known_[:, j], weight)
         rows.append((str(name), distance, shift / spread, p))
     table = pd.DataFrame(rows, columns=columns[:4])
-    table["q_value"] = benjamini_hochberg(table["p_value"].to_numpy())
+    table["q_value"] = false_discovery_control(table["p_value"].to_numpy(float))
     table["moved"] = (table["q_value"] <= LEVEL) & (
         table["distance"] >= SMALLEST_EFFECT
     )

@@ -18,7 +18,6 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from dq.config import NEVER_VETOED
-from dq.counting import benjamini_hochberg
 from dq.segments import Segments, to_ns_array
 from dq.tables import WITNESSES, conform, kind_of, recordings_of
 from dq.witnesses.delay import measured_window
@@ -289,11 +288,13 @@ def _ordered(rows: list[dict]) -> pd.DataFrame:
 def _false_discovery(first: Scores, decided: Mapping) -> dict:
     """Give the false-discovery rate at which each channel and target would be called.
 
-    Benjamini & Hochberg 1995 over all channels and targets that were tested, each with
-    its own trials counted first.
+    Benjamini & Hochberg 1995, J. R. Stat. Soc. B 57 289, over all channels and targets
+    that were tested, each with its own trials counted first.
     """
+    from scipy.stats import false_discovery_control
+
     keys = list(first.best)
     score = np.array([decided.get(k, first.best[k]).sober for k in keys])
     tested = np.array([first.tested[k] for k in keys])
     own = np.minimum(tested * 10.0**-score, 1.0)
-    return dict(zip(keys, benjamini_hochberg(own), strict=True))
+    return dict(zip(keys, false_discovery_control(own), strict=True))

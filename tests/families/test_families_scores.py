@@ -2,8 +2,6 @@
 
 import numpy as np
 import pytest
-from hypothesis import given
-from hypothesis import strategies as st
 from scipy import stats
 from sklearn import metrics
 
@@ -14,7 +12,6 @@ from dq.families.conformal import (
     family_bars,
     sets_below,
 )
-from dq.families.drift import benjamini_hochberg
 
 #: Cohen 1960, Educ. Psychol. Meas. 20 37, two judges' counts (from memory).
 COHEN = np.array([[88, 14, 18], [10, 40, 10], [2, 6, 12]])
@@ -114,9 +111,3 @@ def test_each_family_sets_its_own_bar():
     np.testing.assert_allclose(bars, [0.3, 0.6])
     held = sets_below(strange, bars)
     assert held.tolist() == [[True, False], [True, False], [False, True], [False, True]]
-
-
-@given(st.lists(st.floats(0, 1), min_size=1, max_size=40))
-def test_false_discovery_rate_is_scipys(p):
-    expected = stats.false_discovery_control(p)
-    np.testing.assert_allclose(benjamini_hochberg(p), expected, atol=1e-12)
