@@ -24,7 +24,8 @@ class Column:
 
     ``kind`` is ``float``, ``int``, ``text``, ``flag`` (yes / no) or ``time_ns`` (exact
     integer nanoseconds in memory, decimal seconds in the file).
-    ``format`` is the printf-style format of a float.
+    ``format`` is the printf-style format of a float. An ``optional`` column may be
+    absent from a table that is read, as from one that an earlier version wrote.
     """
 
     name: str
@@ -32,14 +33,14 @@ class Column:
     unit: str = ""
     format: str = "%.6g"
     meaning: str = ""
+    optional: bool = False
 
 
 def _floats(*specs: tuple[str, str, str, str]) -> tuple[Column, ...]:
     return tuple(Column(n, "float", u, f, m) for n, u, f, m in specs)
 
 
-#: One row per transient of one channel (``transients.h5``, ``dq find``).
-TRANSIENTS: tuple[Column, ...] = (
+_TRANSIENT: tuple[Column, ...] = (
     *_floats(
         ("gps_time", "s", "%.6f", "time of the peak"),
         ("gps_start", "s", "%.6f", "start of the tiles above threshold"),
@@ -54,16 +55,28 @@ TRANSIENTS: tuple[Column, ...] = (
     Column("tile_count", "int", "1", "%d", "tiles above threshold"),
 )
 
+_SPREAD: tuple[Column, ...] = tuple(
+    Column(name, "float", "1", "%.4f", meaning, optional=True)
+    for name, meaning in (
+        ("summed_snr", "signal-to-noise ratio of all its tiles together"),
+        ("cluster_snr", "snr of a tile as rare in noise as all its bright tiles"),
+    )
+)
+
+#: One row per transient of one channel (``transients.h5``, ``dq find``).
+TRANSIENTS: tuple[Column, ...] = (*_TRANSIENT, *_SPREAD)
+
 #: Columns of ``strain_transients.csv``.
 STRAIN_TRANSIENTS: tuple[Column, ...] = (
     Column("transient_id", "text", meaning="stable name of the row"),
-    *TRANSIENTS,
+    *_TRANSIENT,
     Column("family", "text", meaning="noise family; unknown = declined"),
     Column("probability", "float", "1", "%.4f", "calibrated family probability"),
     Column("family_set", "text", meaning="families the sorter cannot exclude"),
     Column("novelty", "float", "1", "%.4f", "distance from the training set"),
     Column("witness", "text", meaning="accepted witnesses active at the time"),
     Column("veto", "text", meaning="vetoes that cover the time"),
+    *_SPREAD,
 )
 
 #: Columns of ``witnesses.csv``.
@@ -387,7 +400,8 @@ def csv_table(
         cells = pd.read_csv(io.StringIO(text), dtype=str, keep_default_na=False)
         if keep is not None:
             cells = cells[keep(cells)].reset_index(drop=True)
-        table = {c.name: _parse_column(cells[c.name], c) for c in columns}
+        found = [c for c in columns if c.name in cells or not c.optional]
+        table = {c.name: _parse_column(cells[c.name], c) for c in found}
     except (ValueError, KeyError, pd.errors.ParserError) as error:
         raise InputError(f"table does not read back: {error}") from error
     return conform(pd.DataFrame(table), columns)

@@ -26,13 +26,14 @@ from dq.night.motion_plan import MotionPlan
 from dq.night.whitened import WhitenedBlocks
 from dq.segments import Segments
 from dq.tables import TRANSIENTS, conform
-from dq.tiles import tile_runs
 from dq.transients import (
     LINK,
     Marks,
+    Transforms,
+    equivalent_energy,
     label_marks,
-    place_runs,
-    sharpen_peaks,
+    label_transients,
+    search_tiles,
     split_finished,
     summarise,
 )
@@ -174,45 +175,47 @@ class _ChannelRun:
         spectra = self.spectra[: len(items)]
         level = np.stack([i.level for i in items])
         origin = np.array([i.origin_ns for i in items])
-        runs = tile_runs(
-            spectra,
-            tiles,
+        low = np.array([i.low_ns for i in items]) - origin
+        high = np.array([i.high_ns for i in items]) - origin
+        transforms = Transforms(
+            spectra=spectra,
             level=level,
-            start_s=(np.array([i.low_ns for i in items]) - origin) / _NS,
-            end_s=(np.array([i.high_ns for i in items]) - origin) / _NS,
-            threshold=self.threshold,
+            noise=np.stack([i.noise for i in items]),
+            origin_s=(origin - reference_ns) / _NS,
+            low_s=low / _NS,
+            high_s=high / _NS,
         )
-        origin_s = (origin - reference_ns) / _NS
-        noise = np.stack([i.noise for i in items])
-        marks = place_runs(runs, tiles, origin_s=origin_s, noise=noise)
-        return sharpen_peaks(
-            marks,
-            runs,
-            spectra,
-            tiles,
-            origin_s=origin_s,
-            level=level,
-            q_range=self.q_range,
+        return search_tiles(
+            transforms, tiles, threshold=self.threshold, q_range=self.q_range
         )
 
     def _collect(self, marks: Marks, start_ns: int, *, last: bool) -> None:
-        labels = label_marks(marks)
+        groups = label_marks(marks)
         batch_s = self.plan.batch_ns / _NS
         reach = 2.0 * LINK * self.plan.tiles.longest_half_extent_s
-        finished, pending = split_finished(marks, labels, batch_s - reach)
+        finished, pending = split_finished(marks, groups, batch_s - reach)
         if last or np.count_nonzero(pending) > MAX_PENDING:
             self.cut |= not last
             finished, pending = finished | pending, pending & False
-        table = summarise(marks.take(finished), labels[finished])
+        labels = label_transients(marks, groups)
+        table = self._reported(summarise(marks.take(finished), labels[finished]))
         for name in ("time", "start", "end"):
             table[name] = np.round(table[name], 6) + start_ns / _NS
         self.tables.append(table)
         self.pending = marks.take(pending).shift(-batch_s)
 
+    def _reported(self, found: dict) -> dict:
+        """Give the clusters that are transients, by a tile or by their tiles' sum."""
+        rare = equivalent_energy(found["score"])
+        found["cluster_snr"] = np.sqrt(2.0 * np.maximum(rare - 1.0, 0.0))
+        found["summed_snr"] = np.sqrt(2.0 * found["summed"])
+        kept = found["loud"].astype(bool) | (rare >= self.threshold)
+        return {name: values[kept] for name, values in found.items()}
+
     def table(self) -> pd.DataFrame:
         """Give all transients so far as one table."""
         names = ("time", "start", "end", "frequency", "low", "high", "q", "snr")
-        names = (*names, "amplitude", "count")
+        names = (*names, "amplitude", "count", "summed_snr", "cluster_snr")
         columns = [c.name for c in TRANSIENTS]
         data = {
             column: np.concatenate([t[name] for t in self.tables])

@@ -20,7 +20,8 @@ from dataclasses import dataclass
 import numpy as np
 import scipy.fft
 
-from dq.tiles.kernels import apply_window, find_runs
+from dq.tiles.bright import BrightRuns, find_bright
+from dq.tiles.kernels import CHUNK, apply_window, chunk_maxima, find_runs
 from dq.tiles.midpoints import midpoint_weights, screening_energy
 from dq.tiles.plan import TilePlan
 
@@ -113,37 +114,111 @@ def tile_runs(
     -------
     TileRuns
     """
-    places, energies, rows = [], [], []
+    return scan_tiles(
+        spectra,
+        plan,
+        level=level,
+        start_s=start_s,
+        end_s=end_s,
+        threshold=threshold,
+        bright=None,
+    )[0]
+
+
+def scan_tiles(
+    spectra: np.ndarray,
+    plan: TilePlan,
+    *,
+    level: np.ndarray,
+    start_s: np.ndarray,
+    end_s: np.ndarray,
+    threshold: float,
+    bright: float | None,
+    gap_sigmas: float = 0.0,
+) -> tuple[TileRuns, BrightRuns]:
+    """Find the tiles above threshold and, in the same pass, the bright ones.
+
+    Parameters
+    ----------
+    spectra, plan, level, start_s, end_s, threshold
+        As of :func:`tile_runs`.
+    bright : float or None
+        Normalised energy from which on a coarse tile is bright; None: none is.
+    gap_sigmas : float
+        Bright tiles up to this many sigma_t apart make one run.
+
+    Returns
+    -------
+    TileRuns, BrightRuns
+    """
+    runs, lit = _Gathered(), _Gathered()
     lows, highs = _tile_range(plan, start_s), _tile_range(plan, end_s)
     bounds = (threshold * level.T).astype(np.float32)
     screens = (screening_energy(threshold) * level.T).astype(np.float32)
+    gaps = (gap_sigmas * plan.sigma_t * plan.coarse / plan.length_s).astype(np.int64)
+    for row, part, x, maxima in _rows(spectra, plan):
+        low, high = lows[row, part], highs[row, part]
+        weights, normal = midpoint_weights(), level[part, row]
+        fixed = x, maxima, low, high, bounds[row, part], screens[row, part], weights
+        runs.add(find_runs, fixed, row, part.start, normal, columns=(4, 4))
+        if bright is None:
+            continue
+        least = (bright * normal).astype(np.float32)
+        fixed = x, maxima, (low + 1) // 2, (high + 1) // 2, least, gaps[row]
+        lit.add(find_bright, fixed, row, part.start, normal, columns=(5, 2))
+    if runs.places:
+        place, row, energy = runs.joined()
+        found = TileRuns(place[:, 0], row, *place[:, 1:].T, *energy.T.astype(float))
+    else:
+        none = np.zeros(0, dtype=np.int64)
+        found = TileRuns(none, none, none, none, none, *(np.zeros(0),) * 4)
+    return found, BrightRuns.of(*lit.joined()) if lit.places else BrightRuns.none()
+
+
+def _rows(spectra: np.ndarray, plan: TilePlan):
+    """Yield each row, the items in it, their coarse coefficients and their maxima."""
     chunks = np.clip(_ROW_LIMIT // plan.coarse, 1, len(spectra))
     # fresh memory for every row would cost more in page faults than the transform
     work = np.empty(int(np.max(chunks * plan.coarse)), dtype=np.complex64)
+    maxima = np.empty(int(np.max(chunks * (plan.coarse // CHUNK + 1))), np.float32)
     for row, chunk in enumerate(chunks):
+        width = int(plan.coarse[row]) // CHUNK + 1
         for item in range(0, len(spectra), chunk):
             part = slice(item, item + chunk)
-            n_coarse = int(plan.coarse[row])
-            x = _transform(spectra[part], plan, row, n_coarse, work)
-            place, energy = _runs_of(
-                x.view(np.float32),
-                lows[row, part],
-                highs[row, part],
-                bounds[row, part],
-                screens[row, part],
-            )
-            if len(place):
-                place[:, 0] += item
-                places.append(place)
-                energies.append(energy / level[place[:, 0], row][:, None])
-                rows.append(np.full(len(place), row))
-    if not places:
-        none = np.zeros(0, dtype=np.int64)
-        return TileRuns(none, none, none, none, none, *(np.zeros(0),) * 4)
-    place, energy = np.concatenate(places), np.concatenate(energies)
-    return TileRuns(
-        place[:, 0], np.concatenate(rows), *place[:, 1:].T, *energy.T.astype(float)
-    )
+            x = _transform(spectra[part], plan, row, int(plan.coarse[row]), work)
+            x = x.view(np.float32)
+            peaks = maxima[: len(x) * width].reshape(len(x), width)
+            chunk_maxima(x, peaks)
+            yield row, part, x, peaks
+
+
+class _Gathered:
+    """What a kernel found in the rows so far."""
+
+    def __init__(self):
+        self.places, self.rows, self.energies = [], [], []
+        self.capacity = 1024
+
+    def add(self, kernel, fixed, row: int, item: int, level, *, columns) -> None:
+        """Run a kernel over a row, again with more room where it found more."""
+        while True:
+            places = np.empty((self.capacity, columns[0]), dtype=np.int64)
+            energies = np.empty((self.capacity, columns[1]), dtype=np.float32)
+            found = kernel(*fixed, places, energies)
+            if found <= self.capacity:
+                break
+            self.capacity = 2 * found
+        if found:
+            places, energies = places[:found].copy(), energies[:found]
+            self.energies.append(energies / level[places[:, 0]][:, None])
+            places[:, 0] += item
+            self.places.append(places)
+            self.rows.append(np.full(found, row))
+
+    def joined(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """Give places, rows and normalised energies of all."""
+        parts = self.places, self.rows, self.energies
+        return tuple(np.concatenate(part) for part in parts)
 
 
 def _tile_range(plan: TilePlan, seconds) -> np.ndarray:
@@ -151,14 +226,3 @@ def _tile_range(plan: TilePlan, seconds) -> np.ndarray:
     spacing = plan.length_s / plan.tiles[:, None]
     first = np.ceil(np.asarray(seconds)[None, :] / spacing - 1e-9).astype(np.int64)
     return np.clip(first, 0, plan.tiles[:, None])
-
-
-def _runs_of(x, low, high, bound, screen) -> tuple[np.ndarray, np.ndarray]:
-    capacity, weights = 1024, midpoint_weights()
-    while True:
-        places = np.empty((capacity, 4), dtype=np.int64)
-        energies = np.empty((capacity, 4), dtype=np.float32)
-        found = find_runs(x, low, high, bound, screen, weights, places, energies)
-        if found <= capacity:
-            return places[:found], energies[:found]
-        capacity = found

@@ -53,6 +53,14 @@ class Marks:
         Effective one-sided noise density in that tile, unit^2 per Hz.
     count : ndarray of int
         Tiles in the run.
+    plane : ndarray of int
+        Plane of the run's row.
+    loud : ndarray of bool
+        Whether the run's tiles reach the threshold; the others are bright.
+    score : ndarray of float
+        The run's part of the score of an island of bright tiles.
+    summed : ndarray of float
+        Energy above noise that was summed over the transient, at one of its marks.
     reach_s, reach_hz : ndarray of float
         How far beyond its extent a mark seeks neighbours.
     """
@@ -67,6 +75,10 @@ class Marks:
     energy: np.ndarray
     noise: np.ndarray
     count: np.ndarray
+    plane: np.ndarray
+    loud: np.ndarray
+    score: np.ndarray
+    summed: np.ndarray
     reach_s: np.ndarray
     reach_hz: np.ndarray
 
@@ -85,7 +97,8 @@ class Marks:
     @staticmethod
     def none() -> Marks:
         """Give no marks."""
-        return Marks(*(np.zeros(0) for _ in fields(Marks)))
+        kinds = {"plane": np.int64, "loud": bool}
+        return Marks(*(np.zeros(0, kinds.get(f.name, float)) for f in fields(Marks)))
 
     @staticmethod
     def join(parts: list[Marks]) -> Marks:
@@ -183,6 +196,37 @@ def _join_simultaneous(start, end, labels) -> np.ndarray:
     return name[labels]
 
 
+def label_transients(marks: Marks, groups: np.ndarray) -> np.ndarray:
+    """Give each mark the number of its transient.
+
+    Bright tiles make no transients of loud ones: what reaches the threshold is
+    gathered as if there were no others. The bright marks of a group go to its loudest
+    transient, or are one themselves.
+
+    Parameters
+    ----------
+    marks : Marks
+    groups : ndarray of int, shape (n,)
+        Of :func:`label_marks`.
+
+    Returns
+    -------
+    ndarray of int, shape (n,)
+    """
+    loud = np.flatnonzero(marks.loud)
+    if len(loud) in (0, len(marks)):
+        return groups
+    count = groups.max() + 1
+    labels = groups.copy()
+    labels[loud] = count + label_marks(marks.take(loud))
+    order = loud[np.lexsort((marks.time[loud], marks.energy[loud]))]
+    owner = np.arange(count)
+    owner[groups[order]] = labels[order]  # the last one stays, the loudest
+    faint = ~marks.loud
+    labels[faint] = owner[groups[faint]]
+    return np.unique(labels, return_inverse=True)[1]
+
+
 def split_finished(marks: Marks, labels: np.ndarray, until: float):
     """Split marks into those of clusters that end before ``until`` and the rest.
 
@@ -198,6 +242,36 @@ def split_finished(marks: Marks, labels: np.ndarray, until: float):
     return finished, ~finished
 
 
+def cluster_scores(
+    marks: Marks, labels: np.ndarray
+) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Give each cluster's score, and what its plane of most score is.
+
+    Returns
+    -------
+    score : ndarray, shape (n_clusters,)
+        Summed in each plane; the planes see the same energy, so the best counts.
+    plane : ndarray of int, shape (n_clusters,)
+        That plane, the loudest tile's where no bright tile was kept.
+    loud : ndarray of bool, shape (n_clusters,)
+        Whether a tile of the cluster reaches the threshold.
+    """
+    if len(marks) == 0:
+        return np.zeros(0), np.zeros(0, dtype=np.int64), np.zeros(0, dtype=bool)
+    count, planes = int(labels.max()) + 1, int(marks.plane.max()) + 1
+    cell = labels * planes + marks.plane
+    score = np.bincount(cell, marks.score, count * planes).reshape(count, planes)
+    loudest = np.zeros(count * planes)
+    np.maximum.at(loudest, cell, marks.energy)
+    plane = np.where(
+        score.max(axis=1) > 0,
+        score.argmax(axis=1),
+        loudest.reshape(count, planes).argmax(axis=1),
+    )
+    loud = np.bincount(labels[marks.loud], minlength=count) > 0
+    return score.max(axis=1), plane, loud
+
+
 def summarise(marks: Marks, labels: np.ndarray) -> dict[str, np.ndarray]:
     """Give one row per cluster, in order of peak time.
 
@@ -207,17 +281,28 @@ def summarise(marks: Marks, labels: np.ndarray) -> dict[str, np.ndarray]:
         ``time, start, end`` in s; ``frequency, low, high`` in Hz; ``q``; ``snr`` =
         sqrt(2 (Z - 1)) of the loudest tile; ``amplitude`` = snr sqrt(noise / 2), the
         root-sum-square amplitude of a narrow-band signal (rho = sqrt(2) h_rss /
-        sqrt(S), Sutton 2013); ``count``.
+        sqrt(S), Sutton 2013); ``count``; ``summed`` = energy above noise summed over
+        the cluster, that of the loudest tile where none was summed; ``score``;
+        ``loud``. Extents and counts are those of the tiles above threshold, of the
+        bright ones of the best plane where there are none.
     """
     columns = ("time", "start", "end", "frequency", "low", "high", "q", "snr")
+    columns = (*columns, "amplitude", "count", "summed", "score", "loud")
     if len(marks) == 0:
-        return {c: np.zeros(0) for c in (*columns, "amplitude", "count")}
+        return {c: np.zeros(0) for c in columns}
+    score, plane, loud = cluster_scores(marks, labels)
+    summed = np.bincount(labels, marks.summed)
+    own = np.where(loud[labels], marks.loud, marks.plane == plane[labels])
+    marks, labels = marks.take(own), labels[own]
     # loudest first inside each cluster; ties go to the earlier, then lower, mark
     order = np.lexsort((marks.frequency, marks.time, -marks.energy, labels))
     ordered = marks.take(order)
-    _, first, group = np.unique(labels[order], return_index=True, return_inverse=True)
+    name, first, group = np.unique(
+        labels[order], return_index=True, return_inverse=True
+    )
     peak = ordered.take(first)
-    snr = np.sqrt(2.0 * np.maximum(peak.energy - 1.0, 0.0))
+    energy = np.maximum(peak.energy - 1.0, 0.0)
+    snr = np.sqrt(2.0 * energy)
     out = {
         "time": peak.time,
         "start": np.minimum.reduceat(ordered.start, first),
@@ -229,6 +314,9 @@ def summarise(marks: Marks, labels: np.ndarray) -> dict[str, np.ndarray]:
         "snr": snr,
         "amplitude": snr * np.sqrt(peak.noise / 2.0),
         "count": np.bincount(group, weights=ordered.count).astype(np.int64),
+        "summed": np.where(summed[name] > 0, summed[name], energy),
+        "score": score[name],
+        "loud": loud[name],
     }
     by_time = np.lexsort((out["frequency"], out["time"]))
-    return {name: values[by_time] for name, values in out.items()}
+    return {key: values[by_time] for key, values in out.items()}

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from dq.tiles.bright import BrightRuns
 from dq.tiles.plan import TilePlan
 from dq.tiles.transform import TileRuns
 from dq.transients.cluster import HALF_EXTENT, LINK, Marks
@@ -77,6 +78,57 @@ def place_runs(
         energy=runs.energy,
         noise=noise[item, row],
         count=runs.last - runs.first + 1,
+        plane=plan.plane[row],
+        loud=np.ones(len(runs), dtype=bool),
+        score=np.zeros(len(runs)),
+        summed=np.zeros(len(runs)),
+        reach_s=(LINK - 1.0) * half_t,
+        reach_hz=(LINK - 1.0) * half_f,
+    )
+
+
+def place_bright(
+    runs: BrightRuns,
+    score: np.ndarray,
+    plan: TilePlan,
+    *,
+    origin_s: np.ndarray,
+    noise: np.ndarray,
+) -> Marks:
+    """Place runs of bright tiles in absolute time.
+
+    Parameters
+    ----------
+    runs : BrightRuns
+    score : ndarray, shape (n_runs,)
+        Each run's part of its island's score.
+    plan, origin_s, noise
+        As of :func:`place_runs`.
+
+    Returns
+    -------
+    Marks
+    """
+    row, item = runs.row, runs.item
+    spacing = plan.length_s / plan.coarse[row]
+    origin, frequency = origin_s[item], plan.frequency[row]
+    half_t = HALF_EXTENT * plan.sigma_t[row]
+    half_f = HALF_EXTENT * plan.sigma_f[row]
+    return Marks(
+        start=origin + runs.first * spacing - half_t,
+        end=origin + runs.last * spacing + half_t,
+        low=np.maximum(frequency - half_f, 0.0),
+        high=frequency + half_f,
+        time=origin + runs.peak * spacing,
+        frequency=frequency,
+        q=plan.q[row],
+        energy=runs.energy,
+        noise=noise[item, row],
+        count=runs.count,
+        plane=plan.plane[row],
+        loud=np.zeros(len(runs), dtype=bool),
+        score=score,
+        summed=np.zeros(len(runs)),
         reach_s=(LINK - 1.0) * half_t,
         reach_hz=(LINK - 1.0) * half_f,
     )

@@ -6,32 +6,35 @@ from dataclasses import replace
 
 import numpy as np
 
-from dq.tiles import TilePlan, TileRuns, climb_from
-from dq.transients.cluster import Marks, label_marks
+from dq.tiles import TilePlan, climb_from
+from dq.transients.cluster import Marks
+from dq.transients.transforms import Transforms
 
 
 def sharpen_peaks(
     marks: Marks,
-    runs: TileRuns,
-    spectra: np.ndarray,
+    labels: np.ndarray,
+    chosen: np.ndarray,
+    transforms: Transforms,
     plan: TilePlan,
     *,
-    origin_s: np.ndarray,
-    level: np.ndarray,
+    item: np.ndarray,
+    row: np.ndarray,
     q_range: tuple[float, float],
 ) -> Marks:
-    """Give the marks with each cluster's loudest tile moved to its maximum.
+    """Give the marks with each chosen cluster's loudest tile moved to its maximum.
 
     Parameters
     ----------
-    marks, runs : Marks, TileRuns
-        The same runs, placed and not.
-    spectra : ndarray of complex64, shape (n_items, n_bins)
+    marks : Marks
+    labels : ndarray of int, shape (n_marks,)
+        Cluster of each mark.
+    chosen : ndarray of bool, shape (n_clusters,)
+        Clusters whose peaks are worth the work.
+    transforms : Transforms
     plan : TilePlan
-    origin_s : ndarray, shape (n_items,)
-        Time of each transform's first sample, s, as the marks count it.
-    level : ndarray, shape (n_items, n_rows)
-        Mean energy of each row in noise.
+    item, row : ndarray of int, shape (n_marks,)
+        Where each mark's tiles come from.
     q_range : tuple of float
         Lowest and highest Q.
 
@@ -41,26 +44,23 @@ def sharpen_peaks(
         Energy, time, frequency and Q of the peaks are changed, extents are not. An
         energy is never lowered.
     """
-    if len(marks) == 0:
-        return marks
-    labels = label_marks(marks)
-    order = np.lexsort((-marks.energy, labels))
+    order = np.lexsort((-marks.energy, ~marks.loud, labels))
     peaks = order[np.append(True, np.diff(labels[order]) > 0)]
     columns = ("energy", "time", "frequency", "q")
     moved = {name: getattr(marks, name).copy() for name in columns}
-    for k in peaks:
-        item = runs.item[k]
+    for k in peaks[chosen[labels[peaks]]]:
+        own = item[k]
         energy, time_s, frequency, q = climb_from(
-            spectra[item],
+            transforms.spectra[own],
             plan,
-            time_s=marks.time[k] - origin_s[item],
+            time_s=marks.time[k] - transforms.origin_s[own],
             frequency=marks.frequency[k],
             q=marks.q[k],
             q_range=q_range,
         )
-        energy /= level[item, runs.row[k]]
+        energy /= transforms.level[own, row[k]]
         if energy > marks.energy[k]:
-            found = (energy, time_s + origin_s[item], frequency, q)
+            found = (energy, time_s + transforms.origin_s[own], frequency, q)
             for name, value in zip(columns, found, strict=True):
                 moved[name][k] = value
     return replace(marks, **moved)

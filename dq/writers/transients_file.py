@@ -99,9 +99,8 @@ def read_transients_h5(
 
 
 def _table(group: h5py.Group) -> pd.DataFrame:
-    return conform(
-        pd.DataFrame({c.name: group[c.name][:] for c in TRANSIENTS}), TRANSIENTS
-    )
+    found = [c.name for c in TRANSIENTS if c.name in group or not c.optional]
+    return conform(pd.DataFrame({name: group[name][:] for name in found}), TRANSIENTS)
 
 
 def _some(group: h5py.Group, columns: tuple[str, ...]) -> pd.DataFrame:

@@ -3,7 +3,7 @@
 ``python tests/benchmarks/finder.py [--short] [PART ...]`` runs the parts (all by
 default) and prints one Markdown table. Ratios are measured in alternation within one
 run. ``--short`` only checks that every part runs: its figures mean nothing. Parts:
-accuracy, noise, speed, cwt, memory, night, cores.
+accuracy, noise, shapes, speed, cwt, memory, night, cores.
 """
 
 from __future__ import annotations
@@ -106,6 +106,22 @@ def noise_rows(short: bool) -> list[Row]:
         )
     )
     return rows
+
+
+def shapes_rows(short: bool) -> list[Row]:
+    """Shapes that spread over many tiles, and how much of their SNR is summed."""
+    from shapes import FAMILIES, shapes, summary
+
+    found = shapes(1 if short else 40)
+    return [
+        (
+            f"{family}, SNR 6-20: found by the loudest tile / cluster / either; "
+            "median summed over optimal SNR from 10 on",
+            summary(found, family),
+            "0.9-1.1",
+        )
+        for family in FAMILIES
+    ]
 
 
 def speed_rows(short: bool) -> list[Row]:
@@ -217,6 +233,7 @@ def night_rows(short: bool) -> list[Row]:
 PARTS = {
     "accuracy": accuracy_rows,
     "noise": noise_rows,
+    "shapes": shapes_rows,
     "speed": speed_rows,
     "cwt": cwt_rows,
     "memory": memory_rows,

@@ -7,7 +7,7 @@ import numpy as np
 LINES_HZ = (50.0, 100.0, 150.0, 302.0, 331.9, 508.5, 1011.0)
 
 
-def density(f: np.ndarray) -> np.ndarray:
+def density(f: np.ndarray, *, lines: bool = True) -> np.ndarray:
     """Give a one-sided noise density like a detector's, 1/Hz (own choice).
 
     A steep wall below 20 Hz, a floor, a rise above 300 Hz, and lines of 0.02 Hz width
@@ -15,8 +15,9 @@ def density(f: np.ndarray) -> np.ndarray:
     """
     f = np.maximum(f, 4.0)
     floor = 1e-46 * ((25 / f) ** 12 + (60 / f) ** 2 + 1 + (f / 300) ** 2)
-    lines = sum(1e6 / (1 + ((f - f0) / 0.01) ** 2) for f0 in LINES_HZ)
-    return floor * (1 + lines)
+    if not lines:
+        return floor
+    return floor * (1 + sum(1e6 / (1 + ((f - f0) / 0.01) ** 2) for f0 in LINES_HZ))
 
 
 def make_noise(rng, rate: int, seconds: int) -> np.ndarray:

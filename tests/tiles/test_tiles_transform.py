@@ -5,7 +5,7 @@ import pytest
 import scipy.stats
 
 from dq.tiles import plan_tiles, row_coefficients, tile_runs
-from dq.tiles.kernels import find_runs, single_tile
+from dq.tiles.kernels import CHUNK, chunk_maxima, find_runs, single_tile
 from dq.tiles.midpoints import midpoint_error, midpoint_weights
 
 RATE = 1024.0
@@ -148,8 +148,10 @@ def test_runs_equal_a_slow_scan(rng):
     weights = midpoint_weights()
     places, energies = np.empty((5000, 4), int), np.empty((5000, 4), np.float32)
     none = np.zeros(3, dtype=np.float32)
+    maxima = np.empty((3, 1500 // CHUNK + 1), np.float32)
+    chunk_maxima(x.view(np.float32), maxima)
     found = find_runs(
-        x.view(np.float32), low, high, bound, none, weights, places, energies
+        x.view(np.float32), maxima, low, high, bound, none, weights, places, energies
     )
     expected, fine = [], []
     for item in range(3):

@@ -25,6 +25,10 @@ def marks(rows):
         energy=energy,
         noise=np.full(len(a), 2.0),
         count=np.ones(len(a), dtype=int),
+        plane=np.zeros(len(a), dtype=int),
+        loud=np.ones(len(a), dtype=bool),
+        score=np.zeros(len(a)),
+        summed=np.zeros(len(a)),
         reach_s=np.zeros(len(a)),
         reach_hz=np.zeros(len(a)),
     )
