@@ -26,7 +26,7 @@ from dq.families.sorter import FamilySorter
 from dq.families.space import Space
 
 #: Version of the layout; another one is refused.
-SCHEMA = 1
+SCHEMA = 2
 
 _HEAD = "model.json"
 
