@@ -54,8 +54,8 @@ class Clouds:
         """
         z = _normal_scores(x, self.table)
         out = np.empty((len(z), len(self.centre)))
-        for k, (centre, whiten) in enumerate(zip(self.centre, self.whiten, strict=True)):
-            turned = (z - centre) @ whiten
+        for k, centre in enumerate(self.centre):
+            turned = (z - centre) @ self.whiten[k]
             out[:, k] = np.einsum("ij,ij->i", turned, turned)
         return np.log(out / z.shape[1] + 1e-6)
 

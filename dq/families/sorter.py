@@ -2,9 +2,9 @@
 
 A random forest (Breiman 2001, Mach. Learn. 45 5) votes; its votes become calibrated
 probabilities; sets of families keep a promised coverage; a novelty score lets it
-decline. Sets and novelty follow from one strangeness: votes, distance and chimeras. Everything that needs examples which the forest has not seen (calibration, bars
-of sets and novelty) uses votes of forests grown without the example's whole block of
-time.
+decline. Sets and novelty follow from one strangeness: votes, distance and chimeras.
+Everything that needs examples which the forest has not seen (calibration, bars of sets
+and novelty) uses models grown without the example's whole block of time.
 """
 
 from __future__ import annotations
@@ -270,7 +270,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             X,
             truth,
             families=len(self.classes_),
-            trees=max(self.n_trees // 3, 1),
+            trees=max(3 * self.n_trees // 4, 1),
             seed=self._seed(1),
         )
 

@@ -1,10 +1,10 @@
 """Which labels models that had not seen them bear out, and which they contradict.
 
-Hands name a few transients in a hundred wrongly. Those would widen the cloud of a family
-by the distance to another one, and be strange members for whose sake sets grow.
+Hands name a few transients in a hundred wrongly. Those would widen the cloud of a
+family by the distance to another one, and be strange members for whose sake sets grow.
 Examples are judged by votes of models without their block of time (confident learning:
-Northcutt, Jiang & Chuang 2021, J. Artif. Intell. Res. 70 1373; from memory), with bounds
-of own choice.
+Northcutt, Jiang & Chuang 2021, J. Artif. Intell. Res. 70 1373; from memory), with
+bounds of own choice.
 """
 
 from __future__ import annotations
@@ -15,9 +15,9 @@ import numpy as np
 #: simulated families left out of training (0.1, 0.3 and a majority were tried).
 _BORNE_OUT = 0.3
 
-#: A label is contradicted where another family has at least the first share of votes and
-#: its own at most the second. Of 100 right labels that holds for 0.3, of 100 labels with
-#: 2 wrong ones for 1.7.
+#: A label is contradicted where another family has at least the first share of votes
+#: and its own at most the second. On simulated families that held for 0.3 % of right
+#: labels, and for 1.7 % of labels of which 2 % were wrong.
 _RIVAL, _OWN = 0.8, 0.1
 
 
