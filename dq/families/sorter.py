@@ -270,7 +270,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             X,
             truth,
             families=len(self.classes_),
-            trees=max(3 * self.n_trees // 4, 1),
+            trees=max(self.n_trees // 2, 1),
             seed=self._seed(1),
         )
 

@@ -96,8 +96,9 @@ def set_scores(sorter: FamilySorter) -> pd.DataFrame:
     -------
     pandas.DataFrame
         ``family, examples, covered, coverage, coverage_low, coverage_high, p_value
-        (exact two-sided binomial test of 1 - alpha), mean_size, empty``; the last row
-        is ``all``.
+        (exact two-sided binomial test of 1 - alpha), mean_size, empty, contradicted``
+        (labels that are most likely wrong: they set no bar, count as they stand, and
+        lower the coverage by their share); the last row is ``all``.
     """
     held = sorter.out_of_fold_
     hit = held.sets[np.arange(len(held.truth)), held.truth]
@@ -118,6 +119,7 @@ def set_scores(sorter: FamilySorter) -> pd.DataFrame:
                 "p_value": binomial_two_sided(covered, count, 1.0 - sorter.alpha),
                 "mean_size": float(size[own].mean()),
                 "empty": int((size[own] == 0).sum()),
+                "contradicted": int(held.contradicted[own].sum()),
             }
         )
     return pd.DataFrame(rows)

@@ -175,6 +175,7 @@ def _sets(table: pd.DataFrame) -> list[dict]:
             "p": f"{r.p_value:.2g}",
             "size": f"{r.mean_size:.2f}",
             "empty": r.empty,
+            "contradicted": r.contradicted,
         }
         for r in table.itertuples()
     ]
