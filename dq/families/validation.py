@@ -132,8 +132,8 @@ def headline(sorter: FamilySorter) -> dict[str, float]:
     -------
     dict
         ``examples, families, macro_f1, accuracy, brier, log_loss,
-        calibration_error, coverage, mean_set_size, declined`` (share of known examples
-        called unknown).
+        calibration_error, coverage, mean_set_size, contradicted`` (labels that are
+        most likely wrong), ``declined`` (share of known examples called unknown).
     """
     held, said = sorter.out_of_fold_, decisions(sorter)
     truth = one_hot(held.truth, np.arange(len(sorter.classes_)))
@@ -149,6 +149,7 @@ def headline(sorter: FamilySorter) -> dict[str, float]:
         "calibration_error": calibration_error(confidence, right),
         "coverage": float(total["coverage"]),
         "mean_set_size": float(total["mean_size"]),
+        "contradicted": int(total["contradicted"]),
         "declined": float((said < 0).mean()),
     }
 

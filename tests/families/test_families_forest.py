@@ -149,7 +149,7 @@ def test_distances_are_mahalanobis_where_families_are_normal(rng):
 
 
 def test_labels_are_doubted_where_votes_contradict_them():
-    votes = np.array([[0.9, 0.1, 0.0], [0.85, 0.05, 0.1], [0.6, 0.05, 0.35]])
+    votes = np.array([[0.9, 0.1, 0.0], [0.85, 0.05, 0.1], [0.55, 0.05, 0.4]])
     truth = np.array([0, 1, 1])
     assert contradicted(votes, truth).tolist() == [False, True, False]
     many = np.repeat(votes[[0, 1, 0]], [8, 2, 0], axis=0)
