@@ -129,7 +129,8 @@ def print_training(done: Training) -> None:
         f"macro-F1 {figures['macro_f1']:.3f}, calibration error "
         f"{figures['calibration_error']:.3f}, sets cover {figures['coverage']:.1%} "
         f"with {figures['mean_set_size']:.2f} families, declined "
-        f"{figures['declined']:.1%}; all on time not trained on"
+        f"{figures['declined']:.1%}; all on time not trained on, the "
+        f"{figures['contradicted']} labels that are most likely wrong among it"
     )
     if guard["examples"]:
         click.echo(

@@ -41,25 +41,23 @@ class Clouds:
     centre: np.ndarray
     whiten: np.ndarray
 
-    def distance(self, x: np.ndarray, family: np.ndarray) -> np.ndarray:
-        """Give ln of the mean squared distance per feature from a family's middle.
+    def distances(self, x: np.ndarray) -> np.ndarray:
+        """Give ln of the mean squared distance per feature from every family's middle.
 
         Parameters
         ----------
         x : ndarray, shape (n, features)
-        family : ndarray of int, shape (n,)
 
         Returns
         -------
-        ndarray, shape (n,)
+        ndarray, shape (n, families)
         """
         z = _normal_scores(x, self.table)
-        out = np.empty(len(z))
-        for k in np.unique(family):
-            rows = family == k
-            turned = (z[rows] - self.centre[k]) @ self.whiten[k]
-            out[rows] = np.log((turned**2).mean(axis=1) + 1e-6)
-        return out
+        out = np.empty((len(z), len(self.centre)))
+        for k, centre in enumerate(self.centre):
+            turned = (z - centre) @ self.whiten[k]
+            out[:, k] = np.einsum("ij,ij->i", turned, turned)
+        return np.log(out / z.shape[1] + 1e-6)
 
 
 def fit_clouds(x: np.ndarray, family: np.ndarray, *, families: int) -> Clouds:

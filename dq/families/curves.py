@@ -12,8 +12,9 @@ import pandas as pd
 
 from dq.counting import clopper_pearson
 from dq.families.groups import group_folds
-from dq.families.novelty import fit_tails, novelty_bar
+from dq.families.novelty import fit_tails, novelty_bar, of_chosen
 from dq.families.sorter import FamilySorter
+from dq.families.trust import borne_out
 
 #: Shares of the training blocks at which the learning curve is measured.
 SHARES = (0.125, 0.25, 0.5, 0.75, 1.0)
@@ -121,16 +122,8 @@ def new_families(
         known = held.truth != k
         if len(np.unique(held.truth[known])) < 2:
             continue
-        signs = np.zeros((len(X), 3))
-        chosen = np.zeros(len(X), dtype=np.int64)
-        for f in np.unique(fold):
-            asked = known & (fold == f)
-            train = known & (fold != f)
-            signs[asked], chosen[asked] = _signs(sorter, X, held.truth, train, asked)
-        tails = fit_tails(signs[known], chosen[known], len(sorter.classes_))
-        usual = tails.combine(signs[known], chosen[known])
+        usual, strange = _novelties(sorter, X, held.truth, fold, known)
         bar = novelty_bar(usual, sorter.reject)
-        strange = tails.combine(*_signs(sorter, X, held.truth, known, ~known))
         count, declined = len(strange), int((strange > bar).sum())
         low, high = clopper_pearson(declined, count)
         rows.append(
@@ -147,10 +140,19 @@ def new_families(
     return pd.DataFrame(rows)
 
 
-def _signs(sorter, X, truth, train, asked) -> tuple[np.ndarray, np.ndarray]:
-    """Give signs of novelty and the chosen family of some rows, trained on others."""
-    forest, _ = sorter.grow(X[train], truth[train], np.ones(int(train.sum())))
-    x = X[asked]
-    votes = forest.vote(x)
-    learnt = sorter.learn_signs(X[train], truth[train])
-    return learnt.measure(x, votes), votes.argmax(axis=1)
+def _novelties(sorter, X, truth, fold, known) -> tuple[np.ndarray, np.ndarray]:
+    """Give raw novelty of the known rows, out of fold, and of the others."""
+    x, y, fold, new = X[known], truth[known], fold[known], X[~known]
+    votes = np.zeros((len(x), len(sorter.classes_)))
+    for f in np.unique(fold):
+        train = fold != f
+        forest, _ = sorter.grow(x[train], y[train], np.ones(int(train.sum())))
+        votes[~train] = forest.vote(x[~train])
+    signs = sorter.signs_out_of_fold(x, y, fold, votes)
+    tails = fit_tails(votes, signs)
+    usual = of_chosen(tails.combine(votes, signs), votes)
+    good = borne_out(votes, y)
+    forest, _ = sorter.grow(x, y, np.ones(len(x)))
+    asked = forest.vote(new)
+    strange = tails.combine(asked, sorter.learn_signs(x[good], y[good]).measure(new))
+    return usual, of_chosen(strange, asked)

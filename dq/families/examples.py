@@ -24,6 +24,8 @@ class OutOfFold:
     votes, probability : ndarray, shape (n, families)
     sets : ndarray of bool, shape (n, families)
     novelty : ndarray, shape (n,)
+    contradicted : ndarray of bool, shape (n,)
+        Labels that are most likely wrong; they set no bar.
     """
 
     rows: np.ndarray
@@ -34,6 +36,7 @@ class OutOfFold:
     probability: np.ndarray
     sets: np.ndarray
     novelty: np.ndarray
+    contradicted: np.ndarray
 
 
 def check_families(families: np.ndarray) -> None:

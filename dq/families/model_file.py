@@ -26,7 +26,7 @@ from dq.families.sorter import FamilySorter
 from dq.families.space import Space
 
 #: Version of the layout; another one is refused.
-SCHEMA = 1
+SCHEMA = 2
 
 _HEAD = "model.json"
 
@@ -304,7 +304,7 @@ def _novelty(arrays: _Arrays, features: int, families: int) -> tuple[Signs, Tail
     )
     if not tails.known.shape[1] or clouds.table.shape[1] < 2:
         raise ModelError(f"model {arrays.where} is damaged: no known examples")
-    return Signs(clouds, arrays.forest("strange", features, families + 1)), tails
+    return Signs(clouds, arrays.forest("strange", features, 2)), tails
 
 
 def _map(method: str, arrays: _Arrays, families: int) -> VoteMap:

@@ -2,9 +2,9 @@
 
 A random forest (Breiman 2001, Mach. Learn. 45 5) votes; its votes become calibrated
 probabilities; sets of families keep a promised coverage; a novelty score lets it
-decline. Everything that needs examples which the forest has not seen (calibration, bars
-of sets and novelty) uses votes of forests grown without the example's whole block of
-time.
+decline. Sets and novelty follow from one strangeness: votes, distance and chimeras.
+Everything that needs examples which the forest has not seen (calibration, bars of sets
+and novelty) uses models grown without the example's whole block of time.
 """
 
 from __future__ import annotations
@@ -39,17 +39,13 @@ from dq.families.forest import Forest, pack
 from dq.families.groups import group_folds
 from dq.families.guard import UNKNOWN
 from dq.families.labels import SEPARATOR
-from dq.families.novelty import Signs, fit_signs, fit_tails, novelty_bar
+from dq.families.novelty import Signs, fit_signs, fit_tails, novelty_bar, of_chosen
 from dq.families.space import fit_space
+from dq.families.trust import borne_out, contradicted
 
 #: Examples that one tree is grown from at most: on 5000 invented examples of 12
 #: families, 2000 gave the same macro-F1 as all in half the time.
 _TREE_EXAMPLES = 2000
-
-#: How much of one tree's vote the novelty may move a set's score: it orders examples
-#: whose votes tie and changes nothing else.
-_TIE_VOTES = 1.0
-
 
 #: What is decided of no rows: a quiet night is no error.
 _NOTHING = pd.DataFrame(
@@ -185,7 +181,9 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         group = np.unique(groups, return_inverse=True)[1][root]
         self._fit_out_of_fold(X, truth, weight, root, own, group)
         self.forest_, self.importance_ = self.grow(X, truth, weight)
-        self.signs_ = self.learn_signs(X[own], truth[own])
+        held = self.out_of_fold_
+        good = held.rows[borne_out(held.votes, held.truth)]
+        self.signs_ = self.learn_signs(X[good], truth[good])
         self.space_ = fit_space(X[own])
         self.known_ = X[own].astype(np.float32)
         self.known_family_ = truth[own].astype(np.int32)
@@ -210,34 +208,48 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         of_row[rows] = fold
         of_row = of_row[root]
         votes = np.zeros((len(rows), len(self.classes_)))
-        signs = np.zeros((len(rows), 3))
         for f in np.unique(fold):
-            inside, train = fold == f, of_row != f
+            train = of_row != f
             forest, _ = self.grow(X[train], truth[train], weight[train])
-            learnt = self.learn_signs(X[train & own], truth[train & own])
-            x = X[rows[inside]]
-            votes[inside] = forest.vote(x)
-            signs[inside] = learnt.measure(x, votes[inside])
-        chosen = votes.argmax(axis=1)
-        self.tails_ = fit_tails(signs, chosen, len(self.classes_))
-        raw = self.tails_.combine(signs, chosen)
-        self._set_bars(rows, truth[rows], fold, group[rows], votes, raw, weight[rows])
+            votes[fold == f] = forest.vote(X[rows[fold == f]])
+        signs = self.signs_out_of_fold(X[rows], truth[rows], fold, votes)
+        self.tails_ = fit_tails(votes, signs)
+        strange = self.tails_.combine(votes, signs)
+        self._set_bars(
+            rows, truth[rows], fold, group[rows], votes, strange, weight[rows]
+        )
 
-    def _set_bars(self, rows, truth, fold, group, votes, raw, weight):
+    def signs_out_of_fold(self, X, truth, fold, votes) -> np.ndarray:
+        """Measure each fold's signs of novelty as learnt from the others.
+
+        Which labels are borne out follows from ``votes``, also out of fold: an example
+        bears on what it is measured by only through forests that judged others.
+        """
+        good = borne_out(votes, truth)
+        signs = np.zeros((len(X), votes.shape[1] + 1))
+        for f in np.unique(fold):
+            inside = fold == f
+            learnt = self.learn_signs(X[good & ~inside], truth[good & ~inside])
+            signs[inside] = learnt.measure(X[inside])
+        return signs
+
+    def _set_bars(self, rows, truth, fold, group, votes, strange, weight):
         method = self.calibration
         self.calibration_scores_ = {}
         if method == "auto":
             method, self.calibration_scores_ = choose_map(votes, truth, fold, weight)
         self.map_ = fit_map(method, votes, truth, weight)
-        strange = self._strangeness(votes, raw)
-        self.bars_ = family_bars(strange, truth, self.alpha)
+        wrong = contradicted(votes, truth)
+        raw = of_chosen(strange, votes)
+        self.bars_ = family_bars(strange[~wrong], truth[~wrong], self.alpha)
         self.novelty_bar_ = novelty_bar(raw, self.reject)
         sets = np.zeros(votes.shape, dtype=bool)
         novelty = np.empty(len(raw))
         for f in np.unique(fold):
             # each fold is judged by bars that the other folds set
             inside, rest = fold == f, fold != f
-            bars = family_bars(strange[rest], truth[rest], self.alpha)
+            right = rest & ~wrong
+            bars = family_bars(strange[right], truth[right], self.alpha)
             sets[inside] = sets_below(strange[inside], bars)
             novelty[inside] = raw[inside] / novelty_bar(raw[rest], self.reject)
         self.out_of_fold_ = OutOfFold(
@@ -249,6 +261,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             probability=mapped_out_of_fold(method, votes, truth, fold, weight),
             sets=sets,
             novelty=novelty,
+            contradicted=wrong,
         )
 
     def learn_signs(self, X, truth) -> Signs:
@@ -257,7 +270,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
             X,
             truth,
             families=len(self.classes_),
-            trees=max(self.n_trees // 3, 1),
+            trees=max(self.n_trees // 2, 1),
             seed=self._seed(1),
         )
 
@@ -273,11 +286,6 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         ).fit(X, truth, sample_weight=weight)
         forest = pack(grown.estimators_, grown.classes_, len(self.classes_))
         return forest, grown.feature_importances_
-
-    def _strangeness(self, votes, raw) -> np.ndarray:
-        """Give how strange each family would be: few votes, then far from all known."""
-        tie = _TIE_VOTES / self.n_trees * raw / (1.0 + raw)
-        return 1.0 - votes + tie[:, None]
 
     def _seed(self, purpose: int) -> int:
         state = self.random_state
@@ -312,9 +320,9 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         )
         return X, self.forest_.vote(X)
 
-    def _raw_novelty(self, X, votes) -> np.ndarray:
-        signs = self.signs_.measure(X, votes)
-        return self.tails_.combine(signs, votes.argmax(axis=1))
+    def _strangeness(self, X, votes) -> np.ndarray:
+        """Give how strange a member of each family an example would be."""
+        return self.tails_.combine(votes, self.signs_.measure(X))
 
     def predict_proba(self, X) -> np.ndarray:
         """Give calibrated probabilities, shape (n, families)."""
@@ -329,7 +337,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
     def novelty(self, X) -> np.ndarray:
         """Give each row's novelty, 0 upward; beyond 1 the sorter declines."""
         X, votes = self._votes(X)
-        return self._raw_novelty(X, votes) / self.novelty_bar_
+        return of_chosen(self._strangeness(X, votes), votes) / self.novelty_bar_
 
     def predict_set(self, X) -> np.ndarray:
         """Give the families that cannot be excluded: bool, shape (n, families).
@@ -338,9 +346,7 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         bar of every family.
         """
         X, votes = self._votes(X)
-        return sets_below(
-            self._strangeness(votes, self._raw_novelty(X, votes)), self.bars_
-        )
+        return sets_below(self._strangeness(X, votes), self.bars_)
 
     def decide(self, X) -> pd.DataFrame:
         """Sort rows into families.
@@ -358,13 +364,13 @@ class FamilySorter(ClassifierMixin, BaseEstimator):
         index = X.index if isinstance(X, pd.DataFrame) else None
         X, votes = self._votes(X)
         probability = self.map_(votes)
-        raw = self._raw_novelty(X, votes)
+        strange = self._strangeness(X, votes)
         best = probability.argmax(axis=1)
-        novelty = raw / self.novelty_bar_
+        novelty = of_chosen(strange, votes) / self.novelty_bar_
         known = novelty <= 1.0
         family = np.where(known, self.classes_[best].astype(object), UNKNOWN)
         stated = np.where(known, probability[np.arange(len(best)), best], np.nan)
-        sets = sets_below(self._strangeness(votes, raw), self.bars_)
+        sets = sets_below(strange, self.bars_)
         return pd.DataFrame(
             {
                 "family": family,

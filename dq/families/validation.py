@@ -96,8 +96,9 @@ def set_scores(sorter: FamilySorter) -> pd.DataFrame:
     -------
     pandas.DataFrame
         ``family, examples, covered, coverage, coverage_low, coverage_high, p_value
-        (exact two-sided binomial test of 1 - alpha), mean_size, empty``; the last row
-        is ``all``.
+        (exact two-sided binomial test of 1 - alpha), mean_size, empty, contradicted``
+        (labels that are most likely wrong: they set no bar, count as they stand, and
+        lower the coverage by their share); the last row is ``all``.
     """
     held = sorter.out_of_fold_
     hit = held.sets[np.arange(len(held.truth)), held.truth]
@@ -118,6 +119,7 @@ def set_scores(sorter: FamilySorter) -> pd.DataFrame:
                 "p_value": binomial_two_sided(covered, count, 1.0 - sorter.alpha),
                 "mean_size": float(size[own].mean()),
                 "empty": int((size[own] == 0).sum()),
+                "contradicted": int(held.contradicted[own].sum()),
             }
         )
     return pd.DataFrame(rows)
@@ -130,8 +132,8 @@ def headline(sorter: FamilySorter) -> dict[str, float]:
     -------
     dict
         ``examples, families, macro_f1, accuracy, brier, log_loss,
-        calibration_error, coverage, mean_set_size, declined`` (share of known examples
-        called unknown).
+        calibration_error, coverage, mean_set_size, contradicted`` (labels that are
+        most likely wrong), ``declined`` (share of known examples called unknown).
     """
     held, said = sorter.out_of_fold_, decisions(sorter)
     truth = one_hot(held.truth, np.arange(len(sorter.classes_)))
@@ -147,6 +149,7 @@ def headline(sorter: FamilySorter) -> dict[str, float]:
         "calibration_error": calibration_error(confidence, right),
         "coverage": float(total["coverage"]),
         "mean_set_size": float(total["mean_size"]),
+        "contradicted": int(total["contradicted"]),
         "declined": float((said < 0).mean()),
     }
 

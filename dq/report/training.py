@@ -74,7 +74,8 @@ def _facts(report: TrainingReport) -> list[tuple[str, str, str]]:
         (
             percent(f["coverage"]),
             "covered by the sets",
-            f"{f['mean_set_size']:.2f} families in a set",
+            f"{f['mean_set_size']:.2f} families in a set; {f['contradicted']} labels "
+            "are most likely wrong",
         ),
         (percent(f["declined"]), "called unknown", "of examples of known families"),
     ]
@@ -175,6 +176,7 @@ def _sets(table: pd.DataFrame) -> list[dict]:
             "p": f"{r.p_value:.2g}",
             "size": f"{r.mean_size:.2f}",
             "empty": r.empty,
+            "contradicted": r.contradicted,
         }
         for r in table.itertuples()
     ]

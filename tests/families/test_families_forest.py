@@ -10,10 +10,12 @@ from sklearn.ensemble import ExtraTreesClassifier, RandomForestClassifier
 from sklearn.frozen import FrozenEstimator
 
 from dq.families.calibration import METHODS, choose_map, fit_map, mapped_out_of_fold
+from dq.families.clouds import fit_clouds
 from dq.families.forest import pack
 from dq.families.novelty import chimeras
 from dq.families.scores import brier, calibration_error, one_hot
 from dq.families.space import REACH, fit_space
+from dq.families.trust import borne_out, contradicted
 
 
 @pytest.fixture(scope="module")
@@ -130,6 +132,34 @@ def test_chimeras_take_usual_values_from_two_families(rng):
     # most hold the first value of one family beside the second of the other
     assert (mixed[:, 0] != mixed[:, 1] - 10).mean() > 0.3
     assert len(chimeras(x[:50], family[:50], 10, rng=rng)) == 0
+
+
+def test_distances_are_mahalanobis_where_families_are_normal(rng):
+    """Closed form: a member lies at 1 per feature, one k spreads off at k squared."""
+    family = np.repeat([0, 1], 4000)
+    x = rng.normal(size=(8000, 4)) + np.where(family, 3.0, 0.0)[:, None]
+    clouds = fit_clouds(x, family, families=3)
+    distance = np.exp(clouds.distances(x))
+    assert distance.shape == (8000, 3)
+    np.testing.assert_allclose(distance[family == 0, 0].mean(), 1.0, atol=0.15)
+    np.testing.assert_allclose(distance[family == 1, 1].mean(), 1.0, atol=0.15)
+    assert distance[family == 0, 1].mean() > 4 < distance[family == 1, 0].mean()
+    # a family without examples lies around the middle of all
+    np.testing.assert_allclose(clouds.centre[2], 0.0, atol=0.05)
+
+
+def test_labels_are_doubted_where_votes_contradict_them():
+    votes = np.array([[0.9, 0.1, 0.0], [0.85, 0.05, 0.1], [0.55, 0.05, 0.4]])
+    truth = np.array([0, 1, 1])
+    assert contradicted(votes, truth).tolist() == [False, True, False]
+    many = np.repeat(votes[[0, 1, 0]], [8, 2, 0], axis=0)
+    told = np.array([0] * 6 + [1] * 2 + [1] * 2)
+    # all of family 1 is doubtful: a family that is hard to tell keeps its examples
+    assert borne_out(many, told).all()
+    told = np.array([0] * 8 + [0, 2])
+    many[9] = [0.0, 0.2, 0.8]
+    many[8] = [0.1, 0.9, 0.0]
+    assert borne_out(many, told).tolist() == [True] * 8 + [False, True]
 
 
 def test_space_centres_scales_and_bears_odd_columns(rng):

@@ -121,8 +121,8 @@ def test_a_pickle_is_refused_and_never_run(tmp_path, data):
 def test_other_versions_and_features_are_named(data):
     with pytest.raises(ModelError, match=r"trained with dq 0\.1\.0, this is 0\.2\.0"):
         read(head_with(data, meta={**META, "dq_version": "0.1.0"}), version="0.2.0")
-    with pytest.raises(ModelError, match="layout 2, this version reads 1"):
-        read(head_with(data, schema=2))
+    with pytest.raises(ModelError, match="layout 3, this version reads 2"):
+        read(head_with(data, schema=3))
     names = [f"feature_{i:02d}" for i in range(24)]
     with pytest.raises(ModelError, match="needs 'feature_23', which is not measured"):
         read(data, features=names[:-1])
@@ -139,6 +139,9 @@ def test_other_versions_and_features_are_named(data):
         ("forest_left", lambda a: np.full_like(a, 10**8)),
         ("forest_right", lambda a: a * 0),
         ("strange_feature", lambda a: a + 99),
+        ("strange_votes", lambda a: a[:, :1]),
+        ("tail_known", lambda a: a[:2]),
+        ("cloud_whiten", lambda a: a[1:]),
         ("forest_votes", lambda a: a[:, 1:]),
         ("bars", lambda a: a.astype("f4")),
         ("known_family", lambda a: a + 99),
@@ -176,7 +179,7 @@ def test_cut_and_missing_files(tmp_path, data):
 
 
 def test_every_error_is_one_line(data):
-    for broken in (b"x", head_with(data, schema=2), repacked(data, {"map.npy": None})):
+    for broken in (b"x", head_with(data, schema=3), repacked(data, {"map.npy": None})):
         with pytest.raises(ModelError) as caught:
             read(broken)
         assert "\n" not in str(caught.value)

@@ -84,6 +84,62 @@ def test_votes_that_tie_do_not_swell_the_sets():
     assert 0.84 <= hit.mean() <= 0.95
 
 
+def spoilt(y, share, seed):
+    """Give the families with a share of wrong ones, and which are wrong."""
+    rng = np.random.default_rng(seed)
+    wrong = rng.random(len(y)) < share
+    others = [rng.choice([g for g in np.unique(y) if g != f]) for f in y]
+    return np.where(wrong, others, y), wrong
+
+
+def test_wrong_labels_are_set_aside_and_swell_no_sets(fresh):
+    """Planted: 8 % wrong labels, which as members made sets of 1.5 families, 0.99."""
+    x, y, groups = family_table(1, each=80)
+    told, wrong = spoilt(y, 0.08, 8)
+    sorter = FamilySorter(n_trees=100).fit(x, told, groups=groups)
+    found = sorter.out_of_fold_.contradicted
+    assert found[wrong].mean() > 0.5
+    assert found[~wrong].mean() < 0.01
+    later, truth, _ = fresh
+    sets = sorter.predict_set(later)
+    hit = sets[np.arange(len(truth)), np.searchsorted(sorter.classes_, truth)]
+    assert 0.86 <= hit.mean() <= 0.97
+    assert sets.sum(axis=1).mean() < 1.1
+
+
+def test_wrong_labels_widen_no_cloud():
+    """Planted: 8 % of names are of another family, far away; middles hardly move."""
+    x, y, groups = family_table(1, each=80)
+    told, _ = spoilt(y, 0.08, 8)
+    right = FamilySorter(n_trees=60).fit(x, y, groups=groups)
+    sorter = FamilySorter(n_trees=60).fit(x, told, groups=groups)
+    moved = sorter.signs_.clouds.centre - right.signs_.clouds.centre
+    assert np.abs(moved).mean() < 0.03
+
+
+def test_what_is_new_lies_outside_every_set():
+    x, y, groups = family_table(3, each=80)
+    later, truth, _ = family_table(4, each=150)
+    empty = []
+    for family in ("whistle", "ring", "comb"):
+        new = y == family
+        sorter = FamilySorter(n_trees=60).fit(x[~new], y[~new], groups=groups[~new])
+        sets = sorter.predict_set(later[truth == family])
+        empty.append((~sets.any(axis=1)).mean())
+    assert min(empty) > 0.9
+
+
+def test_novelty_is_the_strangeness_of_the_chosen_family(trained, fresh):
+    """A set never holds a family stranger than its bar; novelty orders the sets."""
+    x = fresh[0].to_numpy()
+    votes = trained.forest_.vote(x)
+    strange = trained.tails_.combine(votes, trained.signs_.measure(x))
+    assert strange.shape == votes.shape
+    chosen = strange[np.arange(len(x)), votes.argmax(axis=1)]
+    assert (chosen == strange.min(axis=1)).mean() > 0.97
+    np.testing.assert_allclose(trained.novelty(fresh[0]) * trained.novelty_bar_, chosen)
+
+
 def test_odd_tables_are_borne():
     """A family seen once, a feature never measured, one that never changes."""
     x, y, groups = family_table(14, each=20)
