@@ -1,8 +1,8 @@
 """Bright tiles: far below the threshold of a transient, far above the mean of noise.
 
 A disturbance that spreads over many tiles may leave no loud one, but it leaves many
-bright ones beside each other. Only the coarse tiles of a row are looked at: they hold
-all of its energy.
+bright ones beside each other. Only the coarse tiles of every second row are looked at:
+a row's coarse tiles hold all of its energy, and rows lie a standard deviation apart.
 """
 
 from __future__ import annotations
@@ -13,6 +13,7 @@ import numpy as np
 from numba import njit
 
 from dq.tiles.kernels import CHUNK, _energy
+from dq.tiles.plan import TilePlan
 
 
 @dataclass(frozen=True)
@@ -59,6 +60,17 @@ class BrightRuns:
         """Give no runs."""
         whole, real = np.zeros(0, dtype=np.int64), np.zeros(0)
         return BrightRuns(*(whole,) * 6, real, real)
+
+
+def second_rows(plan: TilePlan) -> np.ndarray:
+    """Say which rows of a plan are looked at: every second one of each plane.
+
+    Returns
+    -------
+    ndarray of bool, shape (n_rows,)
+    """
+    first = np.searchsorted(plan.plane, plan.plane)
+    return (np.arange(len(plan.q)) - first) % 2 == 0
 
 
 @njit(cache=True, nogil=True)

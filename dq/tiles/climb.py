@@ -48,18 +48,30 @@ def fold(spectrum, length_s, time_s, low, groups, size):
     """
     step = 2.0 * np.pi * time_s / length_s
     turn = complex(np.cos(step), np.sin(step))
+    # four bins side by side, each lane turning by four: one lane would wait for itself
+    leap = turn * turn
+    leap *= leap
     out = np.zeros(groups, dtype=np.complex128)
     for group in range(groups):
         first = low + group * size
         last = min(first + size, spectrum.shape[0])
         # a fresh start for each group keeps the recurrence from drifting
         phase = (step * first) % (2.0 * np.pi)
-        factor = complex(np.cos(phase), np.sin(phase))
-        total = 0.0j
-        for k in range(first, last):
-            total += factor * complex(spectrum[k])
-            factor *= turn
-        out[group] = total
+        f0 = complex(np.cos(phase), np.sin(phase))
+        f1 = f0 * turn
+        f2, f3 = f1 * turn, f1 * turn * turn
+        t0, t1, t2, t3 = 0.0j, 0.0j, 0.0j, 0.0j
+        whole = first + 4 * (max(last - first, 0) // 4)
+        for k in range(first, whole, 4):
+            t0 += f0 * complex(spectrum[k])
+            t1 += f1 * complex(spectrum[k + 1])
+            t2 += f2 * complex(spectrum[k + 2])
+            t3 += f3 * complex(spectrum[k + 3])
+            f0, f1, f2, f3 = f0 * leap, f1 * leap, f2 * leap, f3 * leap
+        for k in range(whole, last):
+            t0 += f0 * complex(spectrum[k])
+            f0 *= turn
+        out[group] = t0 + t1 + t2 + t3
     return out
 
 

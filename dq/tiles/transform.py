@@ -20,7 +20,7 @@ from dataclasses import dataclass
 import numpy as np
 import scipy.fft
 
-from dq.tiles.bright import BrightRuns, find_bright
+from dq.tiles.bright import BrightRuns, find_bright, second_rows
 from dq.tiles.kernels import CHUNK, apply_window, chunk_maxima, find_runs
 from dq.tiles.midpoints import midpoint_weights, screening_energy
 from dq.tiles.plan import TilePlan
@@ -143,7 +143,8 @@ def scan_tiles(
     spectra, plan, level, start_s, end_s, threshold
         As of :func:`tile_runs`.
     bright : float or None
-        Normalised energy from which on a coarse tile is bright; None: none is.
+        Normalised energy from which on a coarse tile is bright; None: none is. Every
+        second row is looked at (``second_rows``).
     gap_sigmas : float
         Bright tiles up to this many sigma_t apart make one run.
 
@@ -155,13 +156,14 @@ def scan_tiles(
     lows, highs = _tile_range(plan, start_s), _tile_range(plan, end_s)
     bounds = (threshold * level.T).astype(np.float32)
     screens = (screening_energy(threshold) * level.T).astype(np.float32)
+    chosen = second_rows(plan)
     gaps = (gap_sigmas * plan.sigma_t * plan.coarse / plan.length_s).astype(np.int64)
     for row, part, x, maxima in _rows(spectra, plan):
         low, high = lows[row, part], highs[row, part]
         weights, normal = midpoint_weights(), level[part, row]
         fixed = x, maxima, low, high, bounds[row, part], screens[row, part], weights
         runs.add(find_runs, fixed, row, part.start, normal, columns=(4, 4))
-        if bright is None:
+        if bright is None or not chosen[row]:
             continue
         least = (bright * normal).astype(np.float32)
         fixed = x, maxima, (low + 1) // 2, (high + 1) // 2, least, gaps[row]
