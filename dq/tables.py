@@ -152,6 +152,13 @@ VETO_COST: tuple[Column, ...] = (
         ("volume_time_ratio", "1", "%.6f", "search volume x time, this veto alone"),
         ("volume_time_unique", "1", "%.6f", "the same, beside all other vetoes"),
     ),
+    Column("test_signals", "int", "1", "%d", "test signals in analysed time"),
+    Column("test_signals_vetoed", "int", "1", "%d", "of these, inside the veto"),
+    *_floats(
+        ("test_signals_low", "1", "%.6f", "their share, 95 % interval, lower"),
+        ("test_signals_high", "1", "%.6f", "95 % interval, upper"),
+        ("test_signals_p_value", "1", "%.4g", "chance of as many, by dead time"),
+    ),
 )
 
 #: Columns of ``veto_curve.csv``: vetoes in order of gain per dead time, budget aside.
