@@ -11,11 +11,13 @@ every channel and target as a trial (Bonferroni); a channel that may be accepted
 first held against circular shifts of its own (``dq.witnesses.chance``). The other looks
 at the highest score of all combinations in each of many circular slides of the strain:
 where n of K slides reach s it is (n + 1) / (K + 1), whatever rhythm or clumping the
-channels have. The larger of the two decides where a slide reaches s at all.
+channels have. The larger of the two decides where a slide reaches s at all. A channel
+whose slides score far above chance is measured by them, so it does not hide others.
 """
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -38,18 +40,36 @@ class Chance:
     trials : int
     loudest : ndarray
         Highest score of each slide; empty without slides.
+    divisor : dict of (str, str) to float
+        Of a channel's scores for a target, before they are held against the slides.
     """
 
     trials: int
     loudest: np.ndarray
+    divisor: Mapping[tuple[str, str], float] = field(default_factory=dict)
 
-    def of(self, score: float) -> float:
-        """Give the chance of a score this high anywhere."""
-        counted = float(10.0 ** min(np.log10(max(self.trials, 1)) - score, 0.0))
-        reached = int(np.count_nonzero(self.loudest >= score))
-        if not reached:
-            return counted
-        return max(counted, (reached + 1) / (len(self.loudest) + 1))
+    @classmethod
+    def after(cls, first: Scores) -> Chance:
+        """Give the chance of scores by what a pass over all channels met."""
+        return cls(sum(first.tested.values()), first.loudest, first.divisor)
+
+    def of(self, score: float, channel: str, target: str) -> float:
+        """Give the chance of a score this high anywhere, reached by this channel."""
+        measured = score / self.divisor_of(channel, target)
+        reached = int(np.count_nonzero(self.loudest >= measured))
+        least = (reached + 1) / (len(self.loudest) + 1)
+        if reached:
+            return max(self._counted(score), least)
+        # where its own slides score above chance, the formula's word is not enough
+        return max(self._counted(score), min(self._counted(measured), least))
+
+    def divisor_of(self, channel: str, target: str) -> float:
+        """Give what a channel's scores for a target are divided by; 1 is usual."""
+        return self.divisor.get((channel, target), 1.0)
+
+    def _counted(self, score: float) -> float:
+        """Give the chance by formula, every combination counted as a trial."""
+        return float(10.0 ** min(np.log10(max(self.trials, 1)) - score, 0.0))
 
 
 @dataclass
@@ -103,19 +123,22 @@ def select(
     alpha = channels.settings.false_alarm_probability
     fewest = channels.settings.min_coincidences
     target = targets.names[0]
+
+    def p_of(name: str, found: Combination) -> float:
+        return chance.of(found.sober, name, target)
+
     now = {
         name: found
         for name in names
         if (found := first.best.get((name, target))) is not None
-        and chance.of(found.sober) <= LOOSE
+        and p_of(name, found) <= LOOSE
     }
     out, calibrated = Selection(), set()
-    was = {n for n, found in now.items() if chance.of(found.sober) <= alpha}
-    while now:
-        name = max(now, key=lambda n: (now[n].sober, -now[n].dead_s, n))
+    was = {n for n, found in now.items() if p_of(n, found) <= alpha}
+    while open_ := [n for n, found in now.items() if p_of(n, found) <= alpha]:
+        # a higher score that its own slides explain must not stand before these
+        name = max(open_, key=lambda n: (now[n].sober, -now[n].dead_s, n))
         found = now[name]
-        if chance.of(found.sober) > alpha:
-            break
         if name not in calibrated:
             calibrated.add(name)
             now[name] = channels.calibrate(found, name, targets, analysed)
@@ -134,7 +157,7 @@ def select(
             n: again.best[n, target] for n in sorted(now) if (n, target) in again.best
         }
         calibrated.clear()
-        left = {n for n, f in now.items() if chance.of(f.sober) <= alpha}
+        left = {n for n, f in now.items() if p_of(n, f) <= alpha}
         for other in was - left - {n for n, _ in out.chosen}:
             if other not in out.thin:
                 out.redundant.setdefault(other, name)
