@@ -157,7 +157,10 @@ def _rows(
     known = {n for n, _ in steps}
     rest = [(n, None) for n in sorted(channels.tables) if n not in known]
     rows = []
+    before: set[str] = set()
     for name, step in [*steps, *rest]:
+        again = name in before
+        before.add(name)
         row = {
             "channel": name,
             "target": target,
@@ -174,10 +177,12 @@ def _rows(
             if step is not None:
                 whole = channels.measured(found, name, targets, analysed)
                 row |= _window(channels, name, found, targets)
-            row |= _measured(whole, found, chance, (name, target))
+            row |= _measured(whole, found)
+            row |= _chance(found, chance, name, target, again)
             row["redundant_with"] = picked.redundant.get(name, "")
-            wide = chance.divisor_of(name, target)
-            row["reason"] = _reason(row, found, picked, verdicts[name], channels, wide)
+            row["reason"] = _reason(
+                row, found, picked, verdicts[name], channels, chance
+            )
         strong = at_first is not None and (
             chance.of(at_first.sober, name, target) <= alpha
         )
@@ -186,7 +191,18 @@ def _rows(
     return rows
 
 
-def _measured(whole: Combination, found: Combination, chance: Chance, key) -> dict:
+def _chance(
+    found: Combination, chance: Chance, name: str, target: str, again: bool
+) -> dict:
+    """Give chance and trials; where a witness comes again, only its own are trials."""
+    if again:
+        p, trials = chance.again, chance.own_trials(name, target)
+    else:
+        p, trials = chance.of, chance.trials
+    return {"p_value": p(found.sober, name, target), "trials": trials}
+
+
+def _measured(whole: Combination, found: Combination) -> dict:
     return {
         "snr_threshold": whole.threshold,
         "half_window_s": whole.half_window_s,
@@ -194,7 +210,6 @@ def _measured(whole: Combination, found: Combination, chance: Chance, key) -> di
         "coincidences": whole.coincidences,
         "expected": whole.expected,
         "significance": whole.significance,
-        "p_value": chance.of(found.sober, *key),
         "efficiency": whole.coincidences / whole.total if whole.total else np.nan,
         "dead_time_s": whole.dead_s,
         "use_fraction": whole.windows_hit / max(whole.windows, 1),
@@ -202,7 +217,6 @@ def _measured(whole: Combination, found: Combination, chance: Chance, key) -> di
         "clusters_expected": whole.clusters_expected,
         "dispersion": found.dispersion,
         "calibrated_significance": found.sober,
-        "trials": chance.trials,
     }
 
 
@@ -231,9 +245,10 @@ def _nothing(name: str, channels: Channels, targets: Targets, first: Scores) -> 
 
 
 def _reason(
-    row, found: Combination, picked: Selection, verdict, channels, divisor: float
+    row, found: Combination, picked: Selection, verdict, channels, chance: Chance
 ) -> str:
     settings, p = channels.settings, row["p_value"]
+    divisor = chance.divisor_of(row["channel"], row["target"])
     told = f"; {verdict.reason}" if verdict.reason else ""
     if found.dispersion > _WIDE:
         told += f"; shifted counts scatter {found.dispersion:.1f} times Poisson"
@@ -245,6 +260,8 @@ def _reason(
     over = f"p = {p:.2g} over {row['trials']} trials"
     if verdict.safety == UNSAFE:
         return f"unsafe, never used: {verdict.reason}"
+    if row["accepted"] and row["trials"] < chance.trials:
+        return f"accepted again, with further windows: {over} of its own{told}"
     if row["accepted"]:
         return f"accepted: {over}{told}"
     if row["redundant_with"]:

@@ -219,6 +219,28 @@ def test_slides_hold_what_formulas_cannot(rng):
     assert not out.accepted
 
 
+def test_a_witness_comes_again_at_the_price_of_its_own_trials():
+    rng = np.random.default_rng(51)
+    loud, faint = uniform(rng, 60), uniform(rng, 10)
+    strain = table(np.concatenate([loud, faint, uniform(rng, 150)]))
+    other = pd.concat(
+        [table(loud, 30.0), table(np.concatenate([faint, uniform(rng, 900)]), 7.0)]
+    )
+    bystanders = {f"OV-{k}": table(uniform(rng, 60), 30.0) for k in range(60)}
+    out = find(strain, {"OV-A": other} | bystanders)
+    first, again = (row for _, row in out[out["channel"] == "OV-A"].iterrows())
+    assert first["accepted"]
+    assert again["accepted"]
+    assert first["snr_threshold"] > again["snr_threshold"]
+    score = again["calibrated_significance"]
+    assert again["p_value"] == pytest.approx(again["trials"] * 10**-score, rel=1e-3)
+    assert again["p_value"] <= 0.01
+    # at the price of all trials the same score would not do
+    assert first["trials"] * 10**-score > 0.01
+    assert "again" in again["reason"]
+    assert set(out.loc[out["accepted"], "channel"]) == {"OV-A"}
+
+
 def clock(rng, period):
     times = np.arange(5 + rng.uniform(0, period), HOUR - 5, period)
     return GPS + times + rng.normal(0.0, 0.01, len(times))
