@@ -89,7 +89,7 @@ WITNESSES: tuple[Column, ...] = (
         ("dispersion", "1", "%.4f", "variance over mean of shifted counts"),
         ("calibrated_significance", "1", "%.4f", "what the decision rests on"),
     ),
-    Column("trials", "int", "1", "%d", "combinations tested in all channels"),
+    Column("trials", "int", "1", "%d", "combinations counted: all, or its own again"),
     *_floats(
         ("delay_s", "s", "%.6f", "strain minus witness"),
         ("before_s", "s", "%g", "window before the witness's activity"),
