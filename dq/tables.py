@@ -102,7 +102,7 @@ WITNESSES: tuple[Column, ...] = (
         ("dispersion", "1", "%.4f", "variance over mean of shifted counts"),
         ("calibrated_significance", "1", "%.4f", "what the decision rests on"),
     ),
-    Column("trials", "int", "1", "%d", "combinations tested in all channels"),
+    Column("trials", "int", "1", "%d", "combinations counted: all, or its own again"),
     *_floats(
         ("delay_s", "s", "%.6f", "strain minus witness"),
         ("before_s", "s", "%g", "window before the witness's activity"),
@@ -164,6 +164,13 @@ VETO_COST: tuple[Column, ...] = (
         ("signal_loss_high", "1", "%.6f", "95 % interval, upper"),
         ("volume_time_ratio", "1", "%.6f", "search volume x time, this veto alone"),
         ("volume_time_unique", "1", "%.6f", "the same, beside all other vetoes"),
+    ),
+    Column("test_signals", "int", "1", "%d", "test signals in analysed time"),
+    Column("test_signals_vetoed", "int", "1", "%d", "of these, inside the veto"),
+    *_floats(
+        ("test_signals_low", "1", "%.6f", "their share, 95 % interval, lower"),
+        ("test_signals_high", "1", "%.6f", "95 % interval, upper"),
+        ("test_signals_p_value", "1", "%.4g", "chance of as many, by dead time"),
     ),
 )
 

@@ -44,6 +44,7 @@ def _night_lines(summary: dict) -> list[str]:
         f"vetoes {len(summary['vetoes'])}: take {100 * dead:.2f} % of the analysed "
         f"time{removed} of the transients",
         *summary["volume_time_ratio"].get("words", []),
+        *(summary.get("test_signals") or {}).get("words", []),
     ]
 
 
@@ -61,7 +62,7 @@ def _print_left_out(outcome: NightOutcome) -> None:
 
 def print_vetoes(verdict: Verdict) -> None:
     """Print what each veto costs and removes, and what all bring to a search."""
-    from dq.cost import losing_vetoes, volume_sentence
+    from dq.cost import actuated_words, losing_vetoes, volume_sentence
 
     heads = ("veto", "category", "dead time", "removes", "held out", "use fraction")
     rows = [(*heads, "only by it", "signals lost", "volume x time")]
@@ -87,7 +88,7 @@ def print_vetoes(verdict: Verdict) -> None:
             f"budget removes more than {choice.bound:.2%}"
         )
     click.echo(volume_sentence(verdict.volume))
-    for line in losing_vetoes(verdict.cost):
+    for line in [*losing_vetoes(verdict.cost), *actuated_words(verdict.cost)]:
         click.echo(line)
     click.echo(CAUTION)
 

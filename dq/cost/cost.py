@@ -61,7 +61,7 @@ def cost_of(
     analysed : Segments
     parts : iterable of pandas.DataFrame, optional
         Further columns, measured elsewhere and indexed by the name of the veto:
-        ``held_out``, ``signal_losses``, ``volume_time_columns``.
+        ``held_out``, ``signal_losses``, ``actuated_losses``, ``volume_time_columns``.
 
     Returns
     -------

@@ -1,4 +1,4 @@
-"""The volume-time ratio in words that leave no doubt whether the vetoes pay."""
+"""What vetoes bring and take, in words that leave no doubt whether they pay."""
 
 from __future__ import annotations
 
@@ -58,13 +58,16 @@ def volume_sentence(volume: dict) -> str:
 #: that it rests on is read off ten transients or so (own choice).
 SMALLEST_LOSS = 0.01
 
+#: Sources of vetoes that were chosen; faults are no choice.
+_CHOSEN = ("witness", "family")
+
 
 def losing_vetoes(cost: pd.DataFrame) -> list[str]:
     """Say which vetoes the search is better off without, worst first.
 
     Faults are no choice and are not named.
     """
-    rows = cost[cost["source"].fillna("").isin(["witness", "family"])]
+    rows = cost[cost["source"].fillna("").isin(_CHOSEN)]
     worse = rows[rows["volume_time_unique"] < 1.0 - SMALLEST_LOSS]
     worse = worse.sort_values("volume_time_unique", kind="stable")
     return [
@@ -72,3 +75,48 @@ def losing_vetoes(cost: pd.DataFrame) -> list[str]:
         f"x time would be {1.0 / row.volume_time_unique:.3f} times as large."
         for row in worse.itertuples()
     ]
+
+
+#: A chance of the test signals that a veto takes, number of vetoes counted, below which
+#: it is called too many (own choice: the same as for a witness).
+TOO_MANY = 0.01
+
+
+def actuated_words(cost: pd.DataFrame) -> list[str]:
+    """Say how many test signals the vetoes take, and which veto takes too many.
+
+    Parameters
+    ----------
+    cost : pandas.DataFrame
+        ``dq.tables.VETO_COST``, the row ``all`` last.
+
+    Returns
+    -------
+    list of str
+        One sentence on all vetoes, then one for each veto to beware of; none where no
+        test signals are listed.
+    """
+    import pandas as pd
+
+    total, each = cost.iloc[-1], cost[cost["source"].fillna("").isin(_CHOSEN)]
+    if pd.isna(total.test_signals) or len(cost) < 2:
+        return []
+    if total.test_signals == 0:
+        return ["No test signal fell into analysed time."]
+    count, taken = int(total.test_signals), int(total.test_signals_vetoed)
+    out = [
+        f"Of {count} test signals in analysed time the vetoes take {taken} "
+        f"({100 * taken / count:.1f} %; 95 % interval "
+        f"{100 * total.test_signals_low:.1f} to {100 * total.test_signals_high:.1f} "
+        f"%); their dead time predicts {count * total.dead_time_fraction:.1f}, and as "
+        f"many or more by chance with p = {total.test_signals_p_value:.2g}."
+    ]
+    for row in each.itertuples():
+        if row.test_signals_p_value * len(each) <= TOO_MANY:
+            predicted = count * row.dead_time_fraction
+            out.append(
+                f"Beware: {row.veto} takes {int(row.test_signals_vetoed)} of {count} "
+                f"test signals where its dead time predicts {predicted:.2g}: it may "
+                "answer signals, and would then take real ones."
+            )
+    return out

@@ -13,6 +13,7 @@ from dq.cost import (
     ALL,
     Background,
     Selection,
+    actuated_losses,
     cost_of,
     held_out,
     random_times,
@@ -54,6 +55,7 @@ def measure_vetoes(
     settings: Vetoes,
     planted: pd.DataFrame | None = None,
     search: Search | None = None,
+    signals: np.ndarray | None = None,
 ) -> tuple[pd.DataFrame, dict]:
     """Measure vetoes on data they were not chosen from, on signals and for a search.
 
@@ -71,6 +73,8 @@ def measure_vetoes(
         ``dq.tables.PLANTED``.
     search : Search, optional
         By default the strain's transients are the background.
+    signals : ndarray of int64, optional
+        Times of test signals, nanoseconds.
 
     Returns
     -------
@@ -98,6 +102,8 @@ def measure_vetoes(
             segments, drawn, families=families, planted=planted, padding_s=padding_s
         )
     )
+    if signals is not None:
+        parts.append(actuated_losses(segments, signals, analysed=analysed))
     background = Background(
         strain if search is None else search.triggers,
         analysed=analysed,

@@ -90,6 +90,7 @@ def judge(
         settings=config.vetoes,
         planted=planted,
         search=search,
+        signals=ledger.signals_ns,
     )
     table = strain_table(strain, witnesses, _auxiliary(ledger), vetoes)
     return Verdict(table, witnesses, vetoes, cost, analysed, choice, volume)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
-from dq.cost import losing_vetoes, volume_sentence
+from dq.cost import actuated_words, losing_vetoes, volume_sentence
 from dq.counting import clopper_pearson
 from dq.night.honest import total_row
 from dq.night.judge import Verdict
@@ -58,6 +58,7 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
             "snr20": total["efficiency_snr20"],
         },
         "volume_time_ratio": verdict.volume | {"words": _words(verdict)},
+        "test_signals": _test_signals(verdict.cost),
         "channels": {
             "ok": sum("@" not in name for name in ledger.transients),
             "left_out": manifest["left_out"],
@@ -69,6 +70,23 @@ def summarise_night(ledger: Ledger, verdict: Verdict, manifest: dict) -> dict:
 
 def _words(verdict: Verdict) -> list[str]:
     return [volume_sentence(verdict.volume), *losing_vetoes(verdict.cost)]
+
+
+def _test_signals(cost: pd.DataFrame) -> dict | None:
+    """Give what the vetoes take of the test signals; None where none are listed."""
+    row = total_row(cost)
+    if pd.isna(row["test_signals"]):
+        return _UNKNOWN
+    count = int(row["test_signals"])
+    return {
+        "analysed": count,
+        "vetoed": int(row["test_signals_vetoed"]),
+        "expected_by_dead_time": count * float(row["dead_time_fraction"]),
+        "low": float(row["test_signals_low"]),
+        "high": float(row["test_signals_high"]),
+        "p_value": float(row["test_signals_p_value"]),
+        "words": actuated_words(cost),
+    }
 
 
 def _interval(count: int, trials: int) -> list[float] | None:

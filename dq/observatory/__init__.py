@@ -7,6 +7,7 @@ snr        optimal SNR, peak time and peak frequency of a waveform
 settings   rates, couplings, strengths
 channels   the channel list, with noise and habits
 families   random members of every family
+bilinear   a mirror's pitch times the beam's offset: an option
 schedule   what happens when, how loud, and who sees it
 recording  samples, storage types, files
 listing    lists for the user, truth for the tests

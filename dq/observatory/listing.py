@@ -8,6 +8,7 @@ from collections.abc import Iterable
 
 import numpy as np
 
+from dq.observatory import bilinear
 from dq.observatory.channels import DEAD, STRAIN, ChannelSpec
 from dq.observatory.noise import stream
 from dq.observatory.recording import sample_ns
@@ -143,6 +144,8 @@ def coupling_truth(night: Night) -> str:
         (c.family, c.witness, f"{c.delay_s:g}", f"{min(1.0, c.probability * scale):g}")
         for c in night.settings.couplings
     ]
+    if night.settings.pitch_bursts_per_hour:
+        rows.append((bilinear.FAMILY, bilinear.PRODUCT, "0", "1"))
     return csv_lines("family, witness, delay_s, probability", rows)
 
 
@@ -170,6 +173,9 @@ def label_list(night: Night) -> str:
     families = sorted({f.family for f in night.settings.families})
     rows = []
     for t in night.transients:
+        if t.family == bilinear.FAMILY:
+            # new to the site: nobody knows it, and the others' draws stay as they are
+            continue
         skip = t.family in (SATURATION, TEST_SIGNAL)
         for name, (share, wrong) in LABELLERS.items():
             looked, erred, offset, sure = rng.uniform(size=4)
@@ -194,6 +200,13 @@ def label_list(night: Night) -> str:
 def config_text(night: Night) -> str:
     """Write ``dq.toml``."""
     settings = night.settings
+    products = ""
+    if settings.pitch_bursts_per_hour:
+        products = (
+            "\n[[witnesses.products]]\n"
+            f'fast = "{bilinear.PITCH}"\n'
+            f'slow = "{bilinear.SPOT}"\n'
+        )
     return (
         f"# Orrin Vale is invented. Recorded: GPS {settings.start} to "
         f"{settings.start + settings.duration_s}.\n"
@@ -208,7 +221,7 @@ def config_text(night: Night) -> str:
         "[families]\n"
         'model = "families.model"  # trained on other nights of this site\n\n'
         "[vetoes]\n"
-        "max_dead_time = 0.05  # fraction of analysed time\n"
+        "max_dead_time = 0.05  # fraction of analysed time\n" + products
     )
 
 

@@ -6,6 +6,7 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
+from dq.observatory import bilinear
 from dq.observatory.channels import (
     AUXILIARY,
     NOT_FINITE,
@@ -27,8 +28,9 @@ from dq.observatory.snr import Measured, NoiseModel
 #: Strain energy below this frequency counts for no SNR, Hz: the seismic wall begins.
 STRAIN_LOW_HZ = 10.0
 
-#: Arches of scattered light fainter than this are no transients of the truth table.
-FAINTEST_ARCH = 5.0
+#: Arches of scattered light, and what the beam hears of a mirror's pitch, fainter than
+#: this are no transients of the truth table.
+FAINTEST = 5.0
 
 #: Events keep this far from the ends of the night, s.
 _MARGIN_S = 4.0
@@ -115,10 +117,11 @@ class Night:
 def plan_night(settings: SiteSettings) -> Night:
     """Draw a night from its seed."""
     spares = [spare_channel(n + 1) for n in range(settings.spare_channels)]
+    beam = bilinear.CHANNELS if settings.pitch_bursts_per_hour else ()
     phase = stream(settings.seed, "drift").uniform(0, 2 * np.pi)
     night = Night(
         settings=settings,
-        channels=[*AUXILIARY, *spares],
+        channels=[*AUXILIARY, *beam, *spares],
         drift=LevelDrift(
             settings.noise_level, settings.level_drift, settings.drift_period_s, phase
         ),
@@ -130,6 +133,8 @@ def plan_night(settings: SiteSettings) -> Night:
     planner.test_signals()
     for rate in settings.families:
         planner.family(rate)
+    if beam:
+        planner.pitch_bursts()
     for spec in night.channels:
         if spec.own is not None:
             planner.own_glitches(spec)
@@ -305,8 +310,32 @@ class _Planner:
             self.night.add(STRAIN, Contribution(at, source, factor))
             seen = self._couple(source, at, wanted, couplings, draws)
             if source.cuts_s:
-                parts = [p for p in parts if p.snr >= FAINTEST_ARCH]
+                parts = [p for p in parts if p.snr >= FAINTEST]
             self._note(rate.family, at, parts, witness, seen)
+
+    def pitch_bursts(self) -> None:
+        """Place bursts of a mirror's pitch, and what a beam beside its centre hears."""
+        rng = stream(self.settings.seed, "family", bilinear.FAMILY)
+        spot = bilinear.spot_motion(rng, self.settings.duration_s)
+        whole = Contribution(0.0, spot, 1.0, quantity=True)
+        self.night.add(bilinear.SPOT, whole)
+        for _ in range(self._count(rng, self.settings.pitch_bursts_per_hour)):
+            burst = bilinear.pitch_burst(rng)
+            wanted = heavy_tail(rng, *bilinear.PITCH_SNR, bilinear.PITCH_SNR_INDEX)
+            at = self.calendar.place(rng, burst.before_s, burst.after_s)
+            if at is None:
+                continue
+            amplitude = self._plant(bilinear.PITCH, burst, at, wanted)[1]
+            heard = bilinear.under_beam(burst, spot, at)
+            strain = amplitude * bilinear.STRAIN_PER_PRAD_MM
+            self.night.add(STRAIN, Contribution(at, heard, strain))
+            rate = self.settings.strain_rate
+            values, first_s = sample(heard, rate, 0.45 * rate)
+            found = self.strain.measure(strain * values, first_s=first_s)
+            found = _louder(found, 1.0 / float(self.night.drift(at)))
+            if found.snr >= FAINTEST:
+                seen = (bilinear.PRODUCT,)
+                self._note(bilinear.FAMILY, at, [found], bilinear.PRODUCT, seen)
 
     def _couple(
         self, source: Source, at: float, snr: float, couplings: list[Coupling], draws
@@ -329,13 +358,16 @@ class _Planner:
             seen.append(name)
         return tuple(seen)
 
-    def _plant(self, name: str, source: Source, time: float, snr: float) -> Measured:
+    def _plant(
+        self, name: str, source: Source, time: float, snr: float
+    ) -> tuple[Measured, float]:
+        """Put a source into a channel; give what it is there and its amplitude."""
         model = self.models[name]
         values, first_s = sample(source, model.sample_rate, 0.45 * model.sample_rate)
         found = model.measure(values, first_s=first_s)
         factor = snr / found.snr
         self.night.add(name, Contribution(time, source, factor))
-        return _louder(found, factor)
+        return _louder(found, factor), factor
 
     def own_glitches(self, spec: ChannelSpec) -> None:
         """Place the glitches that stay in a channel."""
@@ -352,7 +384,7 @@ class _Planner:
             reach = max(source.before_s, source.after_s) + 1.0
             if not reach < time < self.settings.duration_s - reach:
                 continue
-            found = self._plant(spec.name, source, time, snr)
+            found, _ = self._plant(spec.name, source, time, snr)
             self.night.own.append(OwnGlitch(spec.name, own.family, _later(found, time)))
 
     def _own_times(self, rng, own) -> np.ndarray:

@@ -108,6 +108,9 @@ class SiteSettings:
         ready time; 0 leaves each out. None takes more than a twentieth of the night.
     rail : float
         Strain at which the converter saturates.
+    pitch_bursts_per_hour : float
+        Bursts of a mirror's pitch, heard in the strain as far as the beam lies beside
+        its centre (``dq.observatory.bilinear``). At 0 the two channels are left out.
     spare_channels : int
         Further quiet auxiliary channels.
     strain_file_s : int
@@ -130,6 +133,7 @@ class SiteSettings:
     own_glitch_scale: float = 1.0
     injections_per_hour: float = 12.0
     saturations_per_hour: float = 3.0
+    pitch_bursts_per_hour: float = 0.0
     gap_s: float = 20.0
     strain_nan_s: float = 0.5
     auxiliary_nan_s: float = 45.0
@@ -157,6 +161,7 @@ class SiteSettings:
         _within("rate_scale", self.rate_scale, 0.0, 10.0)
         _within("coupling_scale", self.coupling_scale, 0.0, 10.0)
         _within("own_glitch_scale", self.own_glitch_scale, 0.0, 10.0)
+        _within("pitch_bursts_per_hour", self.pitch_bursts_per_hour, 0.0, 2000.0)
         _within("spare_channels", self.spare_channels, 0, 10_000)
         _within("strain_file_s", self.strain_file_s, 16, 86400)
         for name in ("gap_s", "strain_nan_s", "auxiliary_nan_s", "not_ready_s"):

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import pandas as pd
 
-from dq.cost import losing_vetoes, volume_sentence
+from dq.cost import actuated_words, losing_vetoes, volume_sentence
 from dq.gps import gps_to_utc_text
 from dq.report.night_tables import NightTables, read_night
 from dq.segments import NS, seconds_text
@@ -225,6 +225,11 @@ def _vetoes(night: NightTables) -> list[dict]:
                 "only": row.unique_removed,
                 "only_dead": f"{row.unique_dead_time_s:.2f}",
                 "lost": percent(row.signal_loss, 2),
+                "tests": _number(row.test_signals_vetoed, "{:.0f}"),
+                "tests_chance": _number(
+                    row.test_signals * row.dead_time_fraction, "{:.2g}"
+                ),
+                "tests_p": _number(row.test_signals_p_value, "{:.2g}"),
                 "volume": _number(row.volume_time_ratio, "{:.3f}"),
             }
         )
@@ -248,7 +253,8 @@ def worth(night: NightTables) -> list[str]:
     if len(night.cost) < 2:
         return []
     volume = night.summary.get("volume_time_ratio") or {}
-    return [volume_sentence(volume), *losing_vetoes(night.cost)]
+    losing = losing_vetoes(night.cost)
+    return [volume_sentence(volume), *losing, *actuated_words(night.cost)]
 
 
 def _text(value) -> str:

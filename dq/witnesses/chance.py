@@ -165,6 +165,45 @@ def dispersion(counts: np.ndarray) -> float:
     return max(float(counts.var() / mean), 1.0) if mean > 0.0 else 1.0
 
 
+def own_measure(scores: np.ndarray, tests: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """Measure scores in what the same channel reaches in its other slides.
+
+    The highest score of all channels over many slides is the bar that a witness must
+    pass. One channel that shares a rhythm with the strain scores as high in the slides
+    that match as without a slide, and would hide all others behind its bar. So each
+    score is divided by the highest one that the channel reaches otherwise over what so
+    many tests reach by chance, where that is above 1.
+
+    Parameters
+    ----------
+    scores : ndarray, shape (n_channels, 1 + n_slides, n_targets)
+        Highest score of each channel for each target; the first one without a slide.
+    tests : ndarray of int, shape (n_channels,)
+        Combinations tested for each channel and target.
+
+    Returns
+    -------
+    measured : ndarray, shape as ``scores``
+    divisor : ndarray, shape (n_channels, n_targets)
+        Of the scores without a slide; at least 1.
+
+    Notes
+    -----
+    The score without a slide and those in slides are treated alike, whichever is which.
+    Where chance alone is at work they are exchangeable, and so are the measured ones:
+    the highest of K + 1 is the first one with a chance of 1 / (K + 1), as before
+    (Westfall & Young 1993, Resampling-Based Multiple Testing; from memory).
+    """
+    top = np.partition(scores, -2, axis=1)[:, -2:, :]
+    second, first = top[:, :1, :], top[:, 1:, :]
+    otherwise = np.where(scores < first, first, second)
+    trials = np.maximum(tests, 1) * scores.shape[1]
+    # chance alone scores above this in one channel of ten at most
+    usual = np.log10(trials)[:, None, None] + 1.0
+    divisor = np.maximum(otherwise / usual, 1.0)
+    return scores / divisor, divisor[:, 0, :]
+
+
 def calibrated_significance(
     count: int, expected: float, shifted: np.ndarray
 ) -> tuple[float, float]:

@@ -40,7 +40,8 @@ if TYPE_CHECKING:
     from dq.config import Witnesses
 
 
-#: Shifted counts this many times wider than Poisson's are worth a word.
+#: Shifted counts this many times wider than Poisson's are worth a word, and slides that
+#: score this many times what chance does.
 _WIDE = 1.5
 
 #: A channel that is there at this share of the loudest transients, of this SNR and at
@@ -94,7 +95,7 @@ def find_witnesses(
     verdicts = {n: _safety(n, channels, safety, signals) for n in sorted(auxiliary)}
     count = settings.slides if slides is None else slides
     first = channels.score(sorted(auxiliary), targets, analysed, slides=count)
-    chance = Chance(sum(first.tested.values()), first.loudest)
+    chance = Chance.after(first)
     allowed = [n for n, v in verdicts.items() if v.safety != UNSAFE]
     rows, decided = [], {}
     for name in targets.names:
@@ -156,7 +157,10 @@ def _rows(
     known = {n for n, _ in steps}
     rest = [(n, None) for n in sorted(channels.tables) if n not in known]
     rows = []
+    before: set[str] = set()
     for name, step in [*steps, *rest]:
+        again = name in before
+        before.add(name)
         row = {
             "channel": name,
             "target": target,
@@ -173,16 +177,32 @@ def _rows(
             if step is not None:
                 whole = channels.measured(found, name, targets, analysed)
                 row |= _window(channels, name, found, targets)
-            row |= _measured(whole, found, chance)
+            row |= _measured(whole, found)
+            row |= _chance(found, chance, name, target, again)
             row["redundant_with"] = picked.redundant.get(name, "")
-            row["reason"] = _reason(row, found, picked, verdicts[name], channels)
-        strong = at_first is not None and chance.of(at_first.sober) <= alpha
+            row["reason"] = _reason(
+                row, found, picked, verdicts[name], channels, chance
+            )
+        strong = at_first is not None and (
+            chance.of(at_first.sober, name, target) <= alpha
+        )
         if target == "all" or strong:
             rows.append(row)
     return rows
 
 
-def _measured(whole: Combination, found: Combination, chance: Chance) -> dict:
+def _chance(
+    found: Combination, chance: Chance, name: str, target: str, again: bool
+) -> dict:
+    """Give chance and trials; where a witness comes again, only its own are trials."""
+    if again:
+        p, trials = chance.again, chance.own_trials(name, target)
+    else:
+        p, trials = chance.of, chance.trials
+    return {"p_value": p(found.sober, name, target), "trials": trials}
+
+
+def _measured(whole: Combination, found: Combination) -> dict:
     return {
         "snr_threshold": whole.threshold,
         "half_window_s": whole.half_window_s,
@@ -190,7 +210,6 @@ def _measured(whole: Combination, found: Combination, chance: Chance) -> dict:
         "coincidences": whole.coincidences,
         "expected": whole.expected,
         "significance": whole.significance,
-        "p_value": chance.of(found.sober),
         "efficiency": whole.coincidences / whole.total if whole.total else np.nan,
         "dead_time_s": whole.dead_s,
         "use_fraction": whole.windows_hit / max(whole.windows, 1),
@@ -198,7 +217,6 @@ def _measured(whole: Combination, found: Combination, chance: Chance) -> dict:
         "clusters_expected": whole.clusters_expected,
         "dispersion": found.dispersion,
         "calibrated_significance": found.sober,
-        "trials": chance.trials,
     }
 
 
@@ -226,14 +244,24 @@ def _nothing(name: str, channels: Channels, targets: Targets, first: Scores) -> 
     return "no windows in jointly analysed time, or windows that fill most of it"
 
 
-def _reason(row, found: Combination, picked: Selection, verdict, channels) -> str:
+def _reason(
+    row, found: Combination, picked: Selection, verdict, channels, chance: Chance
+) -> str:
     settings, p = channels.settings, row["p_value"]
+    divisor = chance.divisor_of(row["channel"], row["target"])
     told = f"; {verdict.reason}" if verdict.reason else ""
     if found.dispersion > _WIDE:
         told += f"; shifted counts scatter {found.dispersion:.1f} times Poisson"
+    if divisor > _WIDE:
+        told += (
+            f"; in slides it scores up to {divisor:.1f} times what chance does, as "
+            "where strain and channel share a rhythm or swells"
+        )
     over = f"p = {p:.2g} over {row['trials']} trials"
     if verdict.safety == UNSAFE:
         return f"unsafe, never used: {verdict.reason}"
+    if row["accepted"] and row["trials"] < chance.trials:
+        return f"accepted again, with further windows: {over} of its own{told}"
     if row["accepted"]:
         return f"accepted: {over}{told}"
     if row["redundant_with"]:

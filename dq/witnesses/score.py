@@ -19,6 +19,7 @@ from dq.segments import NS, Segments
 from dq.witnesses.chance import (
     calibrated_significance,
     clusters_expected,
+    own_measure,
     shifted_counts,
 )
 from dq.witnesses.joint import ACTIVITY, PEAK, Activity, Joint, Targets
@@ -97,7 +98,11 @@ class Scores:
     tested : dict of (str, str) to int
         Combinations tested.
     loudest : ndarray, shape (n_slides,)
-        For each shift of the targets the highest score of any combination.
+        For each shift of the targets the highest score of any combination, each
+        measured in its channel's own (``dq.witnesses.chance.own_measure``).
+    divisor : dict of (str, str) to float
+        What the scores of a channel for a target are divided by before they are held
+        against these; absent without slides.
     joint_s : dict of str to float
         Jointly analysed time of each channel, s.
     """
@@ -105,6 +110,7 @@ class Scores:
     best: dict[tuple[str, str], Combination] = field(default_factory=dict)
     tested: dict[tuple[str, str], int] = field(default_factory=dict)
     loudest: np.ndarray = field(default_factory=lambda: np.zeros(0))
+    divisor: dict[tuple[str, str], float] = field(default_factory=dict)
     joint_s: dict[str, float] = field(default_factory=dict)
 
 
@@ -169,8 +175,7 @@ class Channels:
         dead, found, met = (np.concatenate(x, axis=2) for x in zip(*parts, strict=True))
         sober = _scores(joint, active, ladder, self.kinds, dead, found, met)
         if len(scores.loudest):
-            highest = sober[..., 1:, :].max(axis=(0, 1, 2, 4))
-            np.maximum(scores.loudest, highest, out=scores.loudest)
+            self._slide_scores(names, joint, dead, sober, scores)
         for c, name in enumerate(names):
             for m, target in enumerate(joint.targets.names):
                 tests = int(np.count_nonzero(dead[c] >= 0)) if joint.counts[m] else 0
@@ -179,6 +184,16 @@ class Channels:
                     scores.best[name, target] = self._best(
                         joint, active[c], ladder[c], m, (dead, found, met, sober), c
                     )
+
+    def _slide_scores(self, names, joint, dead, sober, scores: Scores) -> None:
+        """Note what the slides reach, each channel's scores in their own measure."""
+        tests = np.count_nonzero(dead >= 0, axis=(1, 2))
+        measured, divisor = own_measure(sober.max(axis=(1, 2)), tests)
+        highest = measured[:, 1:].max(axis=(0, 2))
+        np.maximum(scores.loudest, highest, out=scores.loudest)
+        for name, row in zip(names, divisor.tolist(), strict=True):
+            for target, value in zip(joint.targets.names, row, strict=True):
+                scores.divisor[name, target] = value
 
     def _best(self, joint, activity, ladder, m: int, counted, c: int) -> Combination:
         """Give the highest score; of equal ones the least dead time."""

@@ -6,16 +6,22 @@ on what is left, itself with other thresholds and windows too, until none is
 significant. A channel that only repeats a better one has nothing left and is named
 redundant with it.
 
+A channel that was chosen may be chosen again, with windows for the fainter or the later
+of what it hears. That it is a witness was decided then, so only its own combinations
+are trials now: a wrong choice costs dead time, it names no wrong witness.
+
 Two chances are held against a score s. The conservative one counts every combination of
 every channel and target as a trial (Bonferroni); a channel that may be accepted is
 first held against circular shifts of its own (``dq.witnesses.chance``). The other looks
 at the highest score of all combinations in each of many circular slides of the strain:
 where n of K slides reach s it is (n + 1) / (K + 1), whatever rhythm or clumping the
-channels have. The larger of the two decides where a slide reaches s at all.
+channels have. The larger of the two decides where a slide reaches s at all. A channel
+whose slides score far above chance is measured by them, so it does not hide others.
 """
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -38,18 +44,50 @@ class Chance:
     trials : int
     loudest : ndarray
         Highest score of each slide; empty without slides.
+    divisor, tested : dict of (str, str) to number
+        Of a channel's scores for a target, before they are held against the slides;
+        combinations tested, as of ``Scores``.
     """
 
     trials: int
     loudest: np.ndarray
+    divisor: Mapping[tuple[str, str], float] = field(default_factory=dict)
+    tested: Mapping[tuple[str, str], int] = field(default_factory=dict)
 
-    def of(self, score: float) -> float:
-        """Give the chance of a score this high anywhere."""
-        counted = float(10.0 ** min(np.log10(max(self.trials, 1)) - score, 0.0))
-        reached = int(np.count_nonzero(self.loudest >= score))
-        if not reached:
-            return counted
-        return max(counted, (reached + 1) / (len(self.loudest) + 1))
+    @classmethod
+    def after(cls, first: Scores) -> Chance:
+        """Give the chance of scores by what a pass over all channels met."""
+        trials = sum(first.tested.values())
+        return cls(trials, first.loudest, first.divisor, first.tested)
+
+    def of(self, score: float, channel: str, target: str) -> float:
+        """Give the chance of a score this high anywhere, reached by this channel."""
+        measured = score / self.divisor_of(channel, target)
+        reached = int(np.count_nonzero(self.loudest >= measured))
+        least = (reached + 1) / (len(self.loudest) + 1)
+        if reached:
+            return max(_counted(score, self.trials), least)
+        # where its own slides score above chance, the formula's word is not enough
+        counted = min(_counted(measured, self.trials), least)
+        return max(_counted(score, self.trials), counted)
+
+    def again(self, score: float, channel: str, target: str) -> float:
+        """Give the chance of a further score of a channel that is a witness already."""
+        measured = score / self.divisor_of(channel, target)
+        return _counted(measured, self.own_trials(channel, target))
+
+    def own_trials(self, channel: str, target: str) -> int:
+        """Give the number of combinations of a channel that a target was tried with."""
+        return self.tested.get((channel, target), 1)
+
+    def divisor_of(self, channel: str, target: str) -> float:
+        """Give what a channel's scores for a target are divided by; 1 is usual."""
+        return self.divisor.get((channel, target), 1.0)
+
+
+def _counted(score: float, trials: int) -> float:
+    """Give the chance by formula, every combination counted as a trial."""
+    return float(10.0 ** min(np.log10(max(trials, 1)) - score, 0.0))
 
 
 @dataclass
@@ -103,19 +141,24 @@ def select(
     alpha = channels.settings.false_alarm_probability
     fewest = channels.settings.min_coincidences
     target = targets.names[0]
+    out, calibrated = Selection(), set()
+    witnesses: set[str] = set()
+
+    def p_of(name: str, found: Combination) -> float:
+        known = chance.again if name in witnesses else chance.of
+        return known(found.sober, name, target)
+
     now = {
         name: found
         for name in names
         if (found := first.best.get((name, target))) is not None
-        and chance.of(found.sober) <= LOOSE
+        and p_of(name, found) <= LOOSE
     }
-    out, calibrated = Selection(), set()
-    was = {n for n, found in now.items() if chance.of(found.sober) <= alpha}
-    while now:
-        name = max(now, key=lambda n: (now[n].sober, -now[n].dead_s, n))
+    was = {n for n, found in now.items() if p_of(n, found) <= alpha}
+    while open_ := [n for n, found in now.items() if p_of(n, found) <= alpha]:
+        # a higher score that its own slides explain must not stand before these
+        name = max(open_, key=lambda n: (now[n].sober, -now[n].dead_s, n))
         found = now[name]
-        if chance.of(found.sober) > alpha:
-            break
         if name not in calibrated:
             calibrated.add(name)
             now[name] = channels.calibrate(found, name, targets, analysed)
@@ -125,8 +168,8 @@ def select(
             del now[name]
             out.thin.add(name)
             continue
-        # the same channel may come again, with another threshold or window
         out.chosen.append((name, found))
+        witnesses.add(name)
         analysed = analysed - _windows(channels, name, found)
         targets = targets.within(analysed)
         again = channels.score(sorted(now), targets, analysed)
@@ -134,8 +177,8 @@ def select(
             n: again.best[n, target] for n in sorted(now) if (n, target) in again.best
         }
         calibrated.clear()
-        left = {n for n, f in now.items() if chance.of(f.sober) <= alpha}
-        for other in was - left - {n for n, _ in out.chosen}:
+        left = {n for n, f in now.items() if p_of(n, f) <= alpha}
+        for other in was - left - witnesses:
             if other not in out.thin:
                 out.redundant.setdefault(other, name)
         was = left

@@ -30,6 +30,7 @@ KEYS = (
     "settings_sha256",
     "inputs_sha256",
     "sorting",
+    "test_signals",
 )
 
 

@@ -68,6 +68,10 @@ def test_demo_vetoes_stay_within_the_budget_and_beat_chance(demo):
     summary = json.loads((base / "night" / "summary.json").read_text())
     assert summary["dead_time_fraction"] <= 0.05
     assert summary["efficiency"]["all"] > 10 * summary["dead_time_fraction"]
+    # no more test signals are lost than dead time explains
+    assert summary["test_signals"]["analysed"] == 12
+    assert summary["test_signals"]["p_value"] > 0.01
+    assert len(summary["test_signals"]["words"]) == 1
 
 
 @pytest.mark.slow

@@ -1,5 +1,7 @@
 """From tables to verdict: families, held-out halves, signals, and the same again."""
 
+from dataclasses import replace
+
 import numpy as np
 import pandas as pd
 import pytest
@@ -8,9 +10,11 @@ from dq.config import parse_config
 from dq.cost import alternate_blocks
 from dq.night.judge import judge
 from dq.night.ledger import PLANTED_FILE, Ledger, read_planted, write_optional
+from dq.night.summary import _test_signals
 from dq.segments import NS, Segments
 from dq.tables import (
     COVERAGE,
+    INJECTIONS,
     NIGHT_CHANNELS,
     PLANTED,
     TRANSIENTS,
@@ -99,6 +103,36 @@ def test_a_planted_witness_holds_out_and_pays(rng):
     # a fault's veto is the same in both halves
     fault = row(verdict, "fault-dropout")
     assert fault.held_out_efficiency == fault.efficiency
+
+
+def test_test_signals_in_the_vetoes_are_counted_over_all_of_the_night(rng):
+    ledger = invented(rng)
+    # two signals lie where OV-A is active, so its veto takes them; one was not analysed
+    active = ledger.transients["OV-A"]["gps_time"].to_numpy()[[3, 30]]
+    quiet = GPS + np.linspace(5.5, HOUR - 5.5, 30)
+    at = np.sort([*active, *quiet, GPS - 100])
+    signals = conform(pd.DataFrame({"gps_time": at}), INJECTIONS)
+    verdict = judge(replace(ledger, injections=signals), settings())
+    a = row(verdict, "witness-ov-a")
+    assert a.test_signals == 32
+    held = [
+        any(low <= t < high for low, high in a_segments(verdict, "witness-ov-a"))
+        for t in np.rint(at * NS)
+    ]
+    assert a.test_signals_vetoed == sum(held) >= 2
+    told = _test_signals(verdict.cost)
+    assert told["analysed"] == 32
+    assert told["vetoed"] >= a.test_signals_vetoed
+    assert told["expected_by_dead_time"] == pytest.approx(
+        32 * row(verdict, "all").dead_time_fraction
+    )
+    assert told["words"][0].startswith("Of 32 test signals")
+    assert _test_signals(judge(ledger, settings()).cost) is None
+
+
+def a_segments(verdict, name):
+    rows = verdict.vetoes[verdict.vetoes.veto == name]
+    return list(zip(rows.gps_start, rows.gps_end, strict=True))
 
 
 def test_a_choice_on_one_half_does_not_look_at_the_other(rng, monkeypatch):

@@ -18,7 +18,15 @@ from dq.report.page import span
 @pytest.fixture(scope="module")
 def finished(tmp_path_factory):
     base = tmp_path_factory.mktemp("report")
-    config = write_site(base / "site", nan=("OV-STRAIN", 150, 151), gap=(180.0, 182.0))
+    config = write_site(
+        base / "site",
+        nan=("OV-STRAIN", 150, 151),
+        gap=(180.0, 182.0),
+        extra='injections = "injections.csv"\n',
+    )
+    signals = [SITE_START + s for s in (20, SITE_BURSTS[1], 90, 230, 400)]
+    lines = ["gps_time", *map(str, signals)]
+    (base / "site" / "injections.csv").write_text("\n".join(lines) + "\n")
     run_night(
         load_config(config),
         start=SITE_START,
@@ -80,6 +88,20 @@ def test_page_says_what_matters(night):
         gps_to_utc_text(SITE_START),
     ):
         assert part in text
+
+
+def test_page_counts_test_signals_in_the_vetoes(night):
+    summary = json.loads((night / "summary.json").read_text())
+    told = summary["test_signals"]
+    assert (told["analysed"], told["vetoed"]) == (4, 1)
+    assert told["low"] < 0.25 < told["high"]
+    assert told["expected_by_dead_time"] == pytest.approx(
+        4 * summary["dead_time_fraction"]
+    )
+    text = write_page(night).read_text()
+    assert "Of 4 test signals in analysed time the vetoes take 1 (25.0 %" in text
+    for line in told["words"]:
+        assert line in text
 
 
 def test_equal_tables_give_equal_bytes(night):

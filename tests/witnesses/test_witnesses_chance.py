@@ -15,6 +15,7 @@ from dq.witnesses.chance import (
     clusters_expected,
     dispersion,
     inner_spacings,
+    own_measure,
     shifted_counts,
 )
 from dq.witnesses.windows import hits
@@ -200,6 +201,55 @@ def test_the_decision_is_never_bolder_than_the_clusters():
         calibrated = out.calibrated_significance.to_numpy()
         assert np.all(calibrated <= clusters + 1e-12)
         assert np.all(calibrated <= out.significance.to_numpy() + 1e-12)
+
+
+def test_usual_slides_leave_scores_as_they_are(rng):
+    scores = rng.exponential(1 / np.log(10), (4, 101, 3))
+    scores[1, 0, 2] = 40.0
+    measured, divisor = own_measure(scores, np.full(4, 50))
+    # 101 times 50 tests reach log10(5050) + 1 = 4.7 by chance at most
+    assert scores[:, 1:].max() < 4.7
+    assert (divisor == 1.0).all()
+    # only the slides of a channel that is coupled shrink, which raises no bar
+    assert measured[1, 0, 2] == 40.0
+    np.testing.assert_allclose(
+        measured[1, 1:, 2], scores[1, 1:, 2] * (np.log10(5050) + 1) / 40.0
+    )
+    measured[1, 1:, 2] = scores[1, 1:, 2]
+    np.testing.assert_array_equal(measured, scores)
+
+
+def test_a_channel_that_scores_high_in_slides_is_measured_by_them():
+    scores = np.ones((1, 101, 1))
+    scores[0, [0, 7, 30], 0] = (400.0, 500.0, 300.0)
+    measured, divisor = own_measure(scores, np.array([99]))
+    usual = np.log10(99 * 101) + 1
+    assert divisor[0, 0] == pytest.approx(500 / usual)
+    # each by the highest of the others
+    assert measured[0, 0, 0] == pytest.approx(400 / 500 * usual)
+    assert measured[0, 7, 0] == pytest.approx(500 / 400 * usual)
+    assert measured[0, 30, 0] == pytest.approx(300 / 500 * usual)
+
+
+def test_slides_and_no_slide_are_measured_alike(rng):
+    """Exchange them, and the measured scores are exchanged: the chance stays exact."""
+    scores = rng.pareto(0.7, (3, 21, 2))
+    scores[2, 5] = scores[2, 9]
+    turn = rng.permutation(21)
+    measured, _ = own_measure(scores, np.array([5, 50, 500]))
+    turned, _ = own_measure(scores[:, turn], np.array([5, 50, 500]))
+    np.testing.assert_array_equal(turned, measured[:, turn])
+
+
+def test_the_highest_is_the_first_as_often_as_any_other(rng):
+    """Channels of chance alone, half of them with a heavy tail: 1 in K + 1 nights."""
+    first, nights, slides = 0, 2000, 19
+    for _ in range(nights):
+        scores = rng.exponential(1 / np.log(10), (10, slides + 1, 1))
+        scores[:5] = rng.pareto(0.5, (5, slides + 1, 1))
+        measured, _ = own_measure(scores, np.full(10, 10))
+        first += measured.max(axis=(0, 2)).argmax() == 0
+    assert scipy.stats.binomtest(first, nights, 1 / (slides + 1)).pvalue > 1e-3
 
 
 def test_calibration_never_passes_what_shifts_reach():

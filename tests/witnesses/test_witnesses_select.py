@@ -219,6 +219,63 @@ def test_slides_hold_what_formulas_cannot(rng):
     assert not out.accepted
 
 
+def test_a_witness_comes_again_at_the_price_of_its_own_trials():
+    rng = np.random.default_rng(51)
+    loud, faint = uniform(rng, 60), uniform(rng, 10)
+    strain = table(np.concatenate([loud, faint, uniform(rng, 150)]))
+    other = pd.concat(
+        [table(loud, 30.0), table(np.concatenate([faint, uniform(rng, 900)]), 7.0)]
+    )
+    bystanders = {f"OV-{k}": table(uniform(rng, 60), 30.0) for k in range(60)}
+    out = find(strain, {"OV-A": other} | bystanders)
+    first, again = (row for _, row in out[out["channel"] == "OV-A"].iterrows())
+    assert first["accepted"]
+    assert again["accepted"]
+    assert first["snr_threshold"] > again["snr_threshold"]
+    score = again["calibrated_significance"]
+    assert again["p_value"] == pytest.approx(again["trials"] * 10**-score, rel=1e-3)
+    assert again["p_value"] <= 0.01
+    # at the price of all trials the same score would not do
+    assert first["trials"] * 10**-score > 0.01
+    assert "again" in again["reason"]
+    assert set(out.loc[out["accepted"], "channel"]) == {"OV-A"}
+
+
+def clock(rng, period):
+    times = np.arange(5 + rng.uniform(0, period), HOUR - 5, period)
+    return GPS + times + rng.normal(0.0, 0.01, len(times))
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_a_machine_with_a_rhythm_does_not_hide_the_others(seed):
+    """Slides that match its rhythm score hundreds; the others are not held to that."""
+    rng = np.random.default_rng([31, seed])
+    cause, beats = uniform(rng, 40), clock(rng, rng.uniform(10, 20))
+    strain = table(np.concatenate([cause, beats]))
+    auxiliary = {
+        "OV-MACHINE": table(beats, 20.0),
+        "OV-CAUSE": table(np.concatenate([cause, uniform(rng, 60)]), 20.0),
+        **{f"OV-{k}": table(uniform(rng, 100), 20.0) for k in range(4)},
+    }
+    out = find(strain, auxiliary).set_index("channel")
+    assert out.loc["OV-CAUSE", "accepted"]
+    assert not out.loc[[f"OV-{k}" for k in range(4)], "accepted"].any()
+    machine = out.loc["OV-MACHINE"]
+    assert machine.significance > 30
+    assert "share a rhythm" in machine.reason
+
+
+def test_a_rhythm_that_is_not_heard_is_accepted_at_the_stated_rate():
+    accepted = 0
+    for seed in range(40):
+        rng = np.random.default_rng([32, seed])
+        period = rng.uniform(15, 60)
+        strain = table(np.concatenate([clock(rng, period), uniform(rng, 60)]))
+        others = {f"OV-{k}": table(clock(rng, period), 20.0) for k in range(6)}
+        accepted += int(find(strain, others).accepted.any())
+    assert accepted <= 2
+
+
 def test_pure_chance_stays_at_its_rate():
     accepted = 0
     for seed in range(40):
