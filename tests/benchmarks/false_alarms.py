@@ -5,12 +5,19 @@ r"""Transients that Gaussian noise raises, against what theory allows.
 
 * lower: every plane of the plan holds B T independent tiles (its bandwidth times the
   time) and each exceeds z with probability exp(-z);
-* upper: all local maxima of the continuous field over time, frequency and Q. Its
-  metric (Chatterji et al. 2004) has the volume element 2 pi / (sqrt(8) Q) dt df dQ, and
-  the expected number of maxima of a chi-squared field of two degrees of freedom above
+* upper: all local maxima of the continuous field over time, frequency and Q. Tiles
+  under the bisquare window w(x) = (1 - x^2)^2, x = (nu - f) / (sqrt(11) sigma) with
+  sigma = f / Q, lose the fraction
+
+      4 pi^2 sigma^2 dt^2 + a df^2 / sigma^2 + b (df / f - dQ / Q)^2
+
+  of their energy, where a = int w'^2 / (11 int w^2) = 3 / 11 and
+  b = int (x w' + w / 2)^2 / int w^2 = 3 / 4 (for a Gaussian window 1 / 4 and 1 / 2, the
+  metric of Chatterji et al. 2004). Its volume element is 2 pi sqrt(a b) / Q dt df dQ.
+  The expected number of maxima of a chi-squared field of two degrees of freedom above
   t = 2 z is V (t^{3/2} - 3 t^{1/2}) exp(-t / 2) / (2 pi)^{3/2} in the inside and
-  A (t - 1) exp(-t / 2) / (2 pi) / 2 on the faces (Worsley 1994, Adv. Appl. Prob. 26
-  13, from memory).
+  A (t - 1) exp(-t / 2) / (2 pi) / 2 on the faces of lowest and highest Q and frequency
+  (Worsley 1994, Adv. Appl. Prob. 26 13, from memory).
 
 A plan of finite mismatch sees fewer maxima than the continuous field, and gathers
 neighbouring ones, so the rate must lie between the two.
@@ -31,7 +38,7 @@ from noise_model import LINES_HZ, make_noise
 
 from dq.counting import garwood
 from dq.night.channel import analyse_channel
-from dq.tiles.plan import highest_frequency, plane_qs
+from dq.tiles.plan import Q_MIN, bisquare, highest_frequency, plane_qs
 
 LADDER = (5.5, 6.0, 6.5)
 
@@ -43,17 +50,30 @@ def lower_rate(snr: float, f_low: float = 10.0) -> float:
     return float(sum(bands) * np.exp(-z))
 
 
+def window_metric() -> tuple[float, float]:
+    """Give what the bisquare window loses to a shift and to a stretch, a and b."""
+    x = np.linspace(-1, 1, 20001)
+    w = bisquare(x)
+    slope = np.gradient(w, x)
+    norm = np.trapezoid(w**2, x)
+    shift = np.trapezoid(slope**2, x) / norm / Q_MIN**2
+    return shift, np.trapezoid((x * slope + w / 2) ** 2, x) / norm
+
+
 def upper_rate(snr: float, f_low: float = 10.0) -> float:
     """Give the rate of maxima of the continuous field above an SNR, 1/s."""
     t = 2 + snr**2
+    a, b = window_metric()
     q = np.geomspace(4, 64, 4001)
-    band = np.array([highest_frequency(x, RATE) - f_low for x in q])
-    volume = np.trapezoid(2 * np.pi / (np.sqrt(8) * q) * band, q)
+    top = np.array([highest_frequency(x, RATE) for x in q])
+    volume = np.trapezoid(2 * np.pi * np.sqrt(a * b) / q * (top - f_low), q)
     inside = volume * (t**1.5 - 3 * t**0.5) * np.exp(-t / 2) / (2 * np.pi) ** 1.5
-    # faces of constant Q: area element sqrt(g_tt g_ff) = pi sqrt(2 + Q^2) / Q dt df
+    # area elements sqrt(g_tt g_ff) dt df and sqrt(g_tt g_QQ) dt dQ
     area = sum(
-        np.pi * np.sqrt(2 + x * x) / x * b for x, b in ((4, band[0]), (64, band[-1]))
+        2 * np.pi * np.sqrt(a + b / x**2) * (f - f_low)
+        for x, f in ((q[0], top[0]), (q[-1], top[-1]))
     )
+    area += np.trapezoid(2 * np.pi * np.sqrt(b) * (top + f_low) / q**2, q)
     faces = area / 2 * (t - 1) * np.exp(-t / 2) / (2 * np.pi)
     return float(inside + faces)
 
